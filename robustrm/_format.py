@@ -10,6 +10,7 @@ import math
 import re
 import unicodedata
 from collections.abc import Sequence
+from decimal import ROUND_HALF_UP, Decimal
 from typing import Literal
 
 Style = Literal["medical", "apa"]
@@ -57,14 +58,17 @@ def _led(text: str, style: Style) -> str:
 def p_cell(p: float | None, style: Style = "medical") -> str:
     """Return a p value for a table cell: never 0, ``"< 0.001"`` below 0.001.
 
+    Halves are rounded up: exact p values such as 1/16 end in one, and down would flatter.
+
     Examples
     --------
-    >>> p_cell(0.0132), p_cell(4e-9), p_cell(0.0132, "apa"), p_cell(1.0)
-    ('0.013', '< 0.001', '.013', '1.000')
+    >>> p_cell(0.0132), p_cell(4e-9), p_cell(0.0132, "apa"), p_cell(1.0), p_cell(1 / 16)
+    ('0.013', '< 0.001', '.013', '1.000', '0.063')
     """
     if p is None or math.isnan(p):
         return DASH
-    return _led("< 0.001" if p < 0.001 else f"{p:.3f}", style)
+    rounded = Decimal(p).quantize(Decimal("0.001"), rounding=ROUND_HALF_UP)
+    return _led("< 0.001" if p < 0.001 else str(rounded), style)
 
 
 def p_phrase(p: float | None, style: Style = "medical") -> str:
@@ -78,6 +82,18 @@ def p_phrase(p: float | None, style: Style = "medical") -> str:
     letter = "P" if style == "medical" else "p"
     cell = p_cell(p, style)
     return f"{letter} {cell}" if cell.startswith("<") else f"{letter} = {cell}"
+
+
+def p_range(low: float, high: float, style: Style = "medical") -> str:
+    """Return the range of several p values for a sentence.
+
+    Examples
+    --------
+    >>> p_range(0.0061, 0.0081), p_range(1e-4, 0.02, "apa"), p_range(1e-5, 1e-4)
+    ('P = 0.006 to 0.008', 'p < .001 to .020', 'P < 0.001')
+    """
+    first, last = p_phrase(low, style), p_cell(high, style)
+    return first if first.endswith(last) else f"{first} to {last}"
 
 
 def restyled(text: str, style: Style) -> str:
@@ -101,7 +117,8 @@ def statistic_phrase(name: str, df: Sequence[float], value: float | None) -> str
     >>> statistic_phrase("Q", (), 6.333)
     'Q = 6.33'
     """
-    listed = ", ".join(f"{d:.0f}" if float(d).is_integer() else f"{d:.2f}" for d in df)
+    # An epsilon of its lower bound gives whole degrees of freedom but for the last bit.
+    listed = ", ".join(f"{d:.0f}" if round(d, 9) == round(d) else f"{d:.2f}" for d in df)
     return f"{name}({listed}) = {fixed(value)}" if listed else f"{name} = {fixed(value)}"
 
 
@@ -143,6 +160,17 @@ def df_text(df: float) -> str:
     return f"{df:.0f}" if float(df).is_integer() else f"{df:.2f}"
 
 
+def declared(value: float | None) -> str:
+    """Return a number that somebody declared, such as a limit, with the digits it was given.
+
+    Examples
+    --------
+    >>> declared(0.3), declared(20.0), declared(-1.5)
+    ('0.3', '20', '−1.5')
+    """
+    return DASH if value is None else f"{value:.6g}".replace("-", "−")
+
+
 def percent(fraction: float, decimals: int = 0) -> str:
     """Return a fraction as percent, without a space (0.95 gives ``"95%"``)."""
     return f"{100 * fraction:.{decimals}f}%"
@@ -175,9 +203,13 @@ def width(text: str) -> int:
 
 
 def aligned(
-    headings: Sequence[str], rows: Sequence[Sequence[str]], *, indent: str = "", left: int = 1
+    headings: Sequence[str],
+    rows: Sequence[Sequence[str]],
+    *,
+    indent: str = "",
+    words: Sequence[int] = (0,),
 ) -> str:
-    """Return a small table in plain text: the first `left` columns left, the others right."""
+    """Return a small table in plain text: the columns that hold `words` left, the others right."""
     cells = [list(headings), *[list(row) for row in rows]]
     widths = [max(width(row[column]) for row in cells) for column in range(len(headings))]
     lines = []
@@ -185,7 +217,7 @@ def aligned(
         padded = []
         for column, (text, room) in enumerate(zip(row, widths, strict=True)):
             blank = " " * (room - width(text))
-            padded.append(text + blank if column < left else blank + text)
+            padded.append(text + blank if column in words else blank + text)
         lines.append((indent + "  ".join(padded)).rstrip())
     lines.insert(1, indent + "  ".join("─" * room for room in widths))
     return "\n".join(lines)

@@ -1,7 +1,7 @@
 """What counts as equal: order of values, sizes of differences and ratios, without float noise.
 
 Measured values come in whole multiples of a reporting step (0.01 mg/L, say). Comparing
-those multiples, as integers, makes 0.525 − 0.5 equal to 0.825 − 0.775 and every exact
+those multiples, as integers, makes 0.525 − 0.5 equal to 0.825 − 0.8 and every exact
 doubling the same ratio. Only data derived by arithmetic (averages of replicates, say)
 fall back to merging values closer than 1e-10 of the largest.
 """
@@ -101,6 +101,18 @@ def order_codes(values: Floats, units: Ints | None, below: Bools, above: Bools) 
     return codes
 
 
+def centred(values: Floats, units: Ints | None) -> Floats:
+    """Return rows (n, k) less their means, times k and in whole units where there are units."""
+    k = values.shape[1]
+    if units is not None and int(np.abs(units).max(initial=0)) * 2 * k < _LARGEST_INTEGER:
+        return np.asarray(k * units - units.sum(axis=1, keepdims=True), dtype=np.float64)
+    scores = np.asarray(values - values.mean(axis=1, keepdims=True))
+    largest = float(np.max(np.abs(scores), initial=0.0))
+    noise = 4 * float(np.finfo(float).eps * np.max(np.abs(values), initial=0.0))
+    scores[np.abs(scores) <= noise] = 0.0
+    return merged(scores, max(MERGE * largest, noise))
+
+
 @dataclass(frozen=True, slots=True)
 class Differences:
     """Paired differences (or log ratios), with their sizes compared exactly.
@@ -115,15 +127,18 @@ class Differences:
         −1, 0 or 1.
     unknown : array (m,) of bool
         Both members lie beyond the same limit: the difference is unknown, not zero.
+    scores : array (m,)
+        Numbers proportional to `values`: whole multiples of the step where there are such.
     """
 
     values: Floats
     sizes: Ints
     signs: Ints
     unknown: Bools
+    scores: Floats
 
     def __post_init__(self) -> None:
-        for array in (self.values, self.sizes, self.signs, self.unknown):
+        for array in (self.values, self.sizes, self.signs, self.unknown, self.scores):
             array.flags.writeable = False
 
 
@@ -131,7 +146,8 @@ def differences_of_units(first: Ints, second: Ints, step: Fraction, unknown: Boo
     """Return differences of whole multiples of `step`: exact, rounded once to float."""
     gaps = [b - a for a, b in zip(first.tolist(), second.tolist(), strict=True)]
     values = np.array([float(gap * step) for gap in gaps])
-    return _coded(values, [abs(gap) for gap in gaps], np.sign(gaps), unknown)
+    sizes = [abs(gap) for gap in gaps]
+    return _coded(values, sizes, np.sign(gaps), unknown, scores=np.array(gaps, dtype=np.float64))
 
 
 def log_ratios_of_units(first: Ints, second: Ints, unknown: Bools) -> Differences:
@@ -172,11 +188,15 @@ def _coded(
     sizes: list[int] | list[Fraction] | list[float],
     signs: NDArray[np.floating] | Ints,
     unknown: Bools,
+    *,
+    scores: Floats | None = None,
 ) -> Differences:
     code = {size: index + 1 for index, size in enumerate(sorted({s for s in sizes if s != 0}))}
+    values = np.asarray(values, dtype=np.float64)
     return Differences(
-        values=np.asarray(values, dtype=np.float64),
+        values=values,
         sizes=np.array([code.get(size, 0) for size in sizes], dtype=np.int64),
         signs=np.asarray(signs, dtype=np.int64),
         unknown=np.asarray(unknown, dtype=np.bool_).copy(),
+        scores=values if scores is None else scores,
     )
