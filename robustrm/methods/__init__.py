@@ -1,0 +1,1 @@
+"""One file for each test; nothing is re-exported here."""

@@ -1,0 +1,288 @@
+"""What every additive score test shares: its null distribution, and a result made of it.
+
+A test on the engine is its scores: per-subject tables of equally likely score vectors, a
+form, and the observed sum. Here the engine's answer is turned into the fields and notes of
+a result, and a demand beyond the work budget into an error.
+"""
+
+from __future__ import annotations
+
+import functools
+import math
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any, Literal, cast
+
+import numpy as np
+from scipy import special
+
+from robustrm._checks import check_choice, check_draws
+from robustrm._format import counted, number, percent
+from robustrm.errors import BudgetError, TooFewError
+from robustrm.kernels.null.engine import smallest_tail, tail
+from robustrm.kernels.null.forms import Form, centring
+from robustrm.kernels.null.results import Tail
+from robustrm.kernels.null.tables import Table, permutation_tables
+from robustrm.kernels.null.work import plan_work
+from robustrm.kernels.score_statistics import chi2_of, f_of, total
+from robustrm.results import Note, TestResult
+from robustrm.table import OccasionTable
+from robustrm.ties import Floats
+
+NULLS = ("auto", "exact", "monte carlo")
+EXCHANGEABLE = (
+    "For each subject every order of the values over the occasions is equally likely "
+    "(the occasions are exchangeable)."
+)
+Rng = np.random.Generator | np.random.SeedSequence | int | None
+
+
+@dataclass(frozen=True, slots=True)
+class NullOptions:
+    """How a null distribution is to be found; the four options that all these tests take.
+
+    Parameters
+    ----------
+    null : {"auto", "exact", "monte carlo"}
+        ``"auto"`` is exact within the stated work budget, Monte Carlo beyond it.
+    draws : int or sequence of int, optional
+        Monte Carlo draws, or their stages.
+    thresholds : sequence of float
+        Levels that the p value is compared with; draws go on while one is in doubt.
+    rng : Generator, SeedSequence, int or None
+        Randomness of Monte Carlo draws.
+    """
+
+    null: str = "auto"
+    draws: int | Sequence[int] | None = None
+    thresholds: Sequence[float] = (0.05,)
+    rng: Rng = field(default=None)
+
+
+@dataclass(frozen=True, slots=True)
+class NullTail:
+    """Tail probability of an additive test, with the smallest one it could have had.
+
+    `smallest_p` is None where it is not known within the work budget.
+    """
+
+    tail: Tail
+    smallest_p: float | None
+    notes: tuple[Note, ...]
+
+    def fields(self) -> dict[str, Any]:
+        """Return the fields of a :class:`TestResult` that tell how p was found."""
+        return {
+            "p_value": self.tail.p_value,
+            "null": self.tail.null,
+            "p_interval": self.tail.p_interval,
+            "arrangements": self.tail.arrangements,
+            "draws": self.tail.draws,
+        }
+
+
+@dataclass(frozen=True, eq=False)
+class AdditiveProblem:
+    """One additive test on one table, ready for the engine.
+
+    Parameters
+    ----------
+    used : OccasionTable
+        The rows behind it, in canonical order.
+    scores : array (n, k) or (n,)
+        Observed score of every cell, or of every pair.
+    tables : tuple of Table
+        Equally likely score vectors of every subject.
+    form : Form
+        Quadratic or linear form of their sum.
+    statistic : callable
+        From the value of the form to the statistic that readers know, rising (batched).
+    """
+
+    used: OccasionTable
+    scores: Floats
+    tables: tuple[Table, ...]
+    form: Form
+    statistic: Callable[[Floats], Floats]
+
+    @property
+    def observed(self) -> Floats:
+        """Observed sum of the score vectors, (d,)."""
+        return np.atleast_1d(self.scores.sum(axis=0))
+
+    @property
+    def observed_statistic(self) -> float:
+        """The statistic of the table as it is."""
+        return float(self.statistic(self.form.values(self.observed, exact=False)))
+
+    def tail(self, options: NullOptions) -> NullTail:
+        """Return the tail probability of the observed sum under all arrangements.
+
+        Raises
+        ------
+        BudgetError
+            With ``null="exact"`` beyond the budget; the message says what it would cost.
+        """
+        check_choice("null", options.null, NULLS)
+        stages = check_draws(options.draws)
+        cost = plan_work(self.tables, self.form)
+        if options.null == "exact" and not cost.affordable:
+            raise BudgetError(
+                f"`null` must be 'auto' or 'monte carlo' for this table, got 'exact': "
+                f"{cost.sentence}."
+            )
+        found = tail(
+            self.tables,
+            self.observed,
+            self.form,
+            null=cast(Literal["auto", "exact", "monte carlo"], options.null),
+            stages=stages,
+            thresholds=tuple(options.thresholds),
+            rng=np.random.default_rng(options.rng),
+        )
+        smallest = smallest_tail(self.tables, self.form)
+        return NullTail(
+            found,
+            None if smallest is None else smallest.p_value,
+            _monte_carlo_notes(found, options.thresholds),
+        )
+
+
+def permuted(
+    used: OccasionTable, scores: Floats, statistic: Callable[[Floats], Floats]
+) -> AdditiveProblem:
+    """Let each subject's scores (n, k) be permuted over the occasions: T = Σ_j (S_j − mean)²."""
+    form = centring(scores.shape[1])
+    return AdditiveProblem(used, scores, permutation_tables(scores), form, statistic)
+
+
+def chi2_statistic(scores: Floats) -> Callable[[Floats], Floats]:
+    """Return the map from T to χ² for scores (n, k)."""
+    return functools.partial(chi2_of, a=float(total(scores)), k=scores.shape[1])
+
+
+def f_statistic(scores: Floats) -> Callable[[Floats], Floats]:
+    """Return the map from T to F for scores (n, k)."""
+    return functools.partial(f_of, a=float(total(scores)), n=scores.shape[0])
+
+
+def complete_rows(table: OccasionTable, title: str) -> OccasionTable:
+    """Return the comparable complete rows, or say that there are none.
+
+    Raises
+    ------
+    TooFewError
+        Without a complete subject.
+    """
+    used = table.comparable()
+    if used.n_subjects < 1:
+        raise TooFewError(
+            f"{title} needs at least 1 subject with all {table.n_occasions} occasions, got none."
+        )
+    return used
+
+
+def complete_pair(table: OccasionTable, first: str, second: str, title: str) -> OccasionTable:
+    """Return the comparable rows that have both occasions, or say that there are none.
+
+    Raises
+    ------
+    TooFewError
+        When no subject has both.
+    """
+    pair = table.comparable((first, second))
+    if pair.n_subjects < 1:
+        raise TooFewError(
+            f"{title} of {second!r} against {first!r} needs at least 1 subject with both, got none."
+        )
+    return pair
+
+
+def chi2_details(problem: AdditiveProblem) -> dict[str, Any]:
+    """Return the usual χ² approximation beside."""
+    k = problem.scores.shape[1]
+    return {"p_chi2": float(special.chdtrc(k - 1, problem.observed_statistic))}
+
+
+def f_details(problem: AdditiveProblem, f: float | None = None) -> dict[str, Any]:
+    """Return the usual F approximation beside; NaN when F is infinite or not defined."""
+    n, k = problem.scores.shape
+    df = (k - 1, (n - 1) * (k - 1))
+    value = problem.observed_statistic if f is None else f
+    p_f = float(special.fdtrc(*df, value)) if math.isfinite(value) else math.nan
+    return {"p_f": p_f, "f_df": df}
+
+
+def omnibus_result(
+    problem: AdditiveProblem,
+    options: NullOptions,
+    *,
+    method: str,
+    statistic_name: str,
+    estimand: str,
+    df: tuple[float, ...] = (),
+    hypothesis: str = EXCHANGEABLE,
+    details: Mapping[str, Any],
+    notes: Sequence[Note] = (),
+    alternative: str | None = None,
+) -> TestResult:
+    """Make the result of an additive test over all occasions.
+
+    Parameters
+    ----------
+    problem : AdditiveProblem
+        The test on its table.
+    options : NullOptions
+        How the null distribution is to be found.
+    method, statistic_name, estimand, df, hypothesis, details, notes, alternative
+        Fields of the result.
+
+    Returns
+    -------
+    TestResult
+    """
+    found = problem.tail(options)
+    used = problem.used
+    return TestResult(
+        method=method,
+        statistic=problem.observed_statistic,
+        statistic_name=statistic_name,
+        df=df,
+        **found.fields(),
+        n_subjects=used.n_subjects,
+        n_occasions=used.n_occasions,
+        hypothesis=hypothesis,
+        estimand=estimand,
+        scale=used.scale,
+        alternative=alternative,
+        subjects=used.ids,
+        notes=(*found.notes, *notes, *_unmoved_note(problem.scores)),
+        details={**details, "smallest_p": found.smallest_p},
+    )
+
+
+def _unmoved_note(scores: Floats) -> tuple[Note, ...]:
+    if scores.any():
+        return ()
+    return (
+        Note(
+            "all tied",
+            "Every subject has the same value on all occasions, so the statistic is not defined.",
+            "All arrangements are alike and P is 1.",
+        ),
+    )
+
+
+def _monte_carlo_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]:
+    if found.p_interval is None or found.draws is None:
+        return ()
+    low, high = found.p_interval
+    in_doubt = [level for level in thresholds if low <= level <= high]
+    text = (
+        f"P by {counted(found.draws, 'random arrangement')}: {number(found.p_value)}, "
+        f"{percent(0.99)} interval {number(low)} to {number(high)}."
+    )
+    if in_doubt:
+        consequence = f"It is not resolved against {number(in_doubt[0])}."
+        return (Note("monte carlo", text, consequence, "Raise `draws` to resolve it."),)
+    return (Note("monte carlo", text),)

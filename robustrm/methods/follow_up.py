@@ -1,0 +1,242 @@
+"""A declared family of comparisons between occasions, tested and adjusted together."""
+
+from __future__ import annotations
+
+import itertools
+import math
+from collections.abc import Mapping, Sequence
+from typing import Any
+from zlib import crc32
+
+import numpy as np
+
+from robustrm._checks import check_choice, check_level, check_member
+from robustrm._format import counted, level_text, number
+from robustrm.errors import ArgumentError, TooFewError
+from robustrm.methods.adjusting import TITLES, adjusted
+from robustrm.methods.registry import ADJUSTMENTS, FAMILIES, METHODS
+from robustrm.results import Comparison, FollowUps, Note, TestResult
+from robustrm.table import OccasionTable
+
+Pair = tuple[str, str]
+
+
+def follow_up(
+    table: OccasionTable,
+    *,
+    method: str = "signed_rank",
+    family: str | Sequence[Pair] = "first",
+    adjust: str = "holm",
+    intervals: str = "separate",
+    level: float = 0.95,
+    null: str = "auto",
+    rng: np.random.Generator | np.random.SeedSequence | int | None = None,
+    options: Mapping[str, Any] | None = None,
+) -> FollowUps:
+    """Compare pairs of occasions as one declared family.
+
+    Parameters
+    ----------
+    table : OccasionTable
+        Each pair uses all subjects that have both of its occasions, so n may differ.
+    method : str, default "signed_rank"
+        Test for every pair; ``robustrm methods`` lists them.
+    family : {"first", "all", "successive"} or list of (earlier, later), default "first"
+        Each later occasion against the first, all pairs, each occasion against the one
+        before it, or named pairs.
+    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh"}, default "holm"
+        Adjustment of the p values over the family.
+    intervals : {"separate", "simultaneous"}, default "separate"
+        Separate intervals hold `level` each; simultaneous ones hold it together, made at
+        the Bonferroni level.
+    level : float, default 0.95
+        Confidence level.
+    null : str, default "auto"
+        Passed to the method where it takes it.
+    rng : Generator, SeedSequence, int or None
+        Randomness of Monte Carlo nulls; every pair draws from a stream of its own, so adding
+        a pair never changes the p value of another.
+    options : mapping, optional
+        Further options of the method, such as ``{"zeros": "drop"}``.
+
+    Returns
+    -------
+    FollowUps
+        All members of the family in their declared order. One that cannot be tested stays
+        in the family and counts in the adjustment, with p NaN and a note.
+
+    Raises
+    ------
+    ArgumentError
+        When the family, method or an option is not known, or an option is not one that the
+        method takes.
+
+    Notes
+    -----
+    The planned comparisons do not depend on the overall test: they are shown whatever it
+    says. Holm, Hochberg, Hommel and Bonferroni control the familywise error (Hochberg and
+    Hommel under non-negative dependence), Benjamini-Hochberg the false discovery rate.
+
+    References
+    ----------
+    .. [1] Holm, S. (1979). A simple sequentially rejective multiple test procedure.
+       Scandinavian Journal of Statistics 6, 65-70.
+    .. [2] Hochberg, Y. (1988). A sharper Bonferroni procedure for multiple tests of
+       significance. Biometrika 75, 800-802.
+    .. [3] Hommel, G. (1988). A stagewise rejective multiple test procedure based on a
+       modified Bonferroni test. Biometrika 75, 383-386.
+    .. [4] Benjamini, Y. and Hochberg, Y. (1995). Controlling the false discovery rate.
+       Journal of the Royal Statistical Society B 57, 289-300.
+
+    Examples
+    --------
+    >>> table = OccasionTable.from_array(
+    ...     [[91, 72, 60], [40, 31, 25], [120, 125, 80], [66, 50, 59], [33, 21, 20], [75, 60, 44]],
+    ...     occasions=["week 0", "week 6", "week 12"],
+    ... )
+    >>> family = follow_up(table.log())
+    >>> [(c.second, round(c.p_value, 4), round(c.p_adjusted, 4)) for c in family]
+    [('week 6', 0.0625, 0.0625), ('week 12', 0.0312, 0.0625)]
+    """
+    check_choice("adjust", adjust, ADJUSTMENTS)
+    check_choice("intervals", intervals, ("separate", "simultaneous"))
+    check_level(level)
+    pairs = declared_pairs(table, family)
+    each = level if intervals == "separate" else 1 - (1 - level) / len(pairs)
+    settings = {**(options or {}), "level": each, "null": null}
+    seeds = _streams(rng, pairs)
+    results = [
+        _tested(table, pair, method, settings, seed)
+        for pair, seed in zip(pairs, seeds, strict=True)
+    ]
+    # a parametric p value has no smallest one
+    smallest = [result.details.get("smallest_p") or 0.0 for result in results]
+    comparisons = tuple(
+        Comparison(first, second, result, p)
+        for (first, second), result, p in zip(
+            pairs, results, adjusted([r.p_value for r in results], adjust), strict=True
+        )
+    )
+    return FollowUps(
+        comparisons=comparisons,
+        method=method,
+        family=family if isinstance(family, str) else "named",
+        adjust=adjust,
+        intervals=intervals,
+        level=level,
+        smallest_p=min(smallest),
+        smallest_p_adjusted=min(adjusted(smallest, adjust)),
+        notes=_notes(comparisons, adjust, intervals, level),
+    )
+
+
+def declared_pairs(table: OccasionTable, family: str | Sequence[Pair]) -> list[Pair]:
+    """Return the pairs (earlier, later) of a family, in the order of the table's occasions."""
+    labels = table.occasions
+    if isinstance(family, str):
+        check_choice("family", family, FAMILIES)
+        if family == "first":
+            return [(labels[0], label) for label in labels[1:]]
+        if family == "successive":
+            return list(itertools.pairwise(labels))
+        return list(itertools.combinations(labels, 2))
+    pairs = [tuple(pair) for pair in family]
+    if not pairs or any(len(pair) != 2 for pair in pairs):
+        raise ArgumentError(f"`family` must hold pairs of two occasions, got {family!r}.")
+    for pair in pairs:
+        for label in pair:
+            check_member("family", label, labels)
+    if len({frozenset(pair) for pair in pairs}) < len(pairs) or any(a == b for a, b in pairs):
+        raise ArgumentError(f"`family` must hold different pairs, got {family!r}.")
+    return [(a, b) for a, b in pairs]
+
+
+def _streams(
+    rng: np.random.Generator | np.random.SeedSequence | int | None, pairs: Sequence[Pair]
+) -> list[np.random.SeedSequence]:
+    root = rng
+    if isinstance(root, np.random.Generator):
+        root = int(root.integers(2**63))
+    entropy = root.entropy if isinstance(root, np.random.SeedSequence) else root
+    return [
+        np.random.SeedSequence(entropy, spawn_key=(crc32("\x1f".join(pair).encode()),))
+        for pair in pairs
+    ]
+
+
+def _tested(
+    table: OccasionTable,
+    pair: Pair,
+    method: str,
+    settings: Mapping[str, Any],
+    seed: np.random.SeedSequence,
+) -> TestResult:
+    known = {entry.name: entry for entry in METHODS if entry.kind == "pair"}
+    entry = known[check_choice("method", method, tuple(known))]
+    common = {"level", "null", "rng"}  # offered to every method, used by those that take them
+    for name in settings:
+        if name not in common:
+            check_choice(f"options of {method}", name, entry.options)
+    taken = {name: value for name, value in settings.items() if name in entry.options}
+    if "rng" in entry.options:
+        taken["rng"] = seed
+    try:
+        return entry.load()(table, *pair, **taken)
+    except TooFewError as error:
+        return _not_estimable(table, pair, method, str(error))
+
+
+def _not_estimable(table: OccasionTable, pair: Pair, method: str, reason: str) -> TestResult:
+    used = table.comparable(pair)
+    return TestResult(
+        method=method,
+        statistic=math.nan,
+        statistic_name="statistic",
+        df=(),
+        p_value=math.nan,
+        null="exact",
+        n_subjects=used.n_subjects,
+        n_occasions=2,
+        hypothesis="not tested",
+        estimand="not estimable",
+        scale=table.scale,
+        subjects=used.ids,
+        notes=(Note("not estimable", reason, "The comparison stays in the family and counts."),),
+        details={"smallest_p": 1.0},
+    )
+
+
+def _notes(
+    comparisons: Sequence[Comparison], adjust: str, intervals: str, level: float
+) -> tuple[Note, ...]:
+    m = len(comparisons)
+    notes = []
+    if m > 1 and intervals == "separate" and adjust != "none":
+        notes.append(
+            Note(
+                "separate intervals",
+                f"The intervals hold {level_text(level)} each and are not adjusted for "
+                f"{counted(m, 'comparison')}; the p values are, after {TITLES[adjust]}.",
+                "An interval may exclude no change where the adjusted p value does not.",
+                "Choose simultaneous intervals to have both alike.",
+            )
+        )
+    if m > 1 and intervals == "simultaneous":
+        notes.append(
+            Note(
+                "simultaneous intervals",
+                f"The {m} intervals hold {level_text(level)} together: each is made at level "
+                f"{number(1 - (1 - level) / m, 5)} (Bonferroni).",
+            )
+        )
+    sizes = sorted({c.result.n_subjects for c in comparisons})
+    if len(sizes) > 1:
+        notes.append(
+            Note(
+                "different n",
+                f"Comparisons rest on {sizes[0]} to {sizes[-1]} subjects: each uses all who "
+                "have both occasions.",
+                "Rows with different n describe different groups of people.",
+            )
+        )
+    return tuple(notes)

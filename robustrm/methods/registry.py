@@ -1,0 +1,201 @@
+"""The list of methods: one line each, in the order in which a reader meets them.
+
+The tuple is literal on purpose: what is offered can be read here, and nothing registers
+itself by being imported. `Method.load` imports the file of the method when it is used.
+"""
+
+from __future__ import annotations
+
+import importlib
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Literal
+
+from robustrm.results import TestResult
+
+Kind = Literal["omnibus", "pair"]
+
+FAMILIES = ("first", "all", "successive")
+ADJUSTMENTS = ("none", "bonferroni", "holm", "hochberg", "hommel", "bh")
+
+
+@dataclass(frozen=True, slots=True)
+class Method:
+    """A method on offer.
+
+    Parameters
+    ----------
+    name : str
+        Name of the function, of its file in ``robustrm.methods`` and of its docs page.
+    kind : {"omnibus", "pair"}
+        Whether it compares all occasions or two.
+    title : str
+        Usual name of the method.
+    question : str
+        The question it answers, as a sentence.
+    uses : {"values", "ranks"}
+        What of the data it uses: results by ranks do not change under any monotone transform.
+    exchangeable : bool
+        Whether its null hypothesis is that each subject's occasions are exchangeable, so that
+        its null distribution is that of rearranging each subject's own values.
+    options : tuple of str
+        Keyword options that the function takes.
+    requires : tuple of str
+        Those among them that have no default: a plan cannot name such a method on its own.
+    """
+
+    name: str
+    kind: Kind
+    title: str
+    question: str
+    uses: Literal["values", "ranks"]
+    exchangeable: bool
+    options: tuple[str, ...]
+    requires: tuple[str, ...] = ()
+
+    def load(self) -> Callable[..., TestResult]:
+        """Return the function."""
+        module = importlib.import_module(f"robustrm.methods.{self.name}")
+        function: Callable[..., TestResult] = getattr(module, self.name)
+        return function
+
+
+_NULL = ("null", "draws", "thresholds", "rng")
+
+METHODS: tuple[Method, ...] = (
+    Method(
+        "friedman",
+        "omnibus",
+        "Friedman test",
+        "Do the occasions tend to rank alike within subjects?",
+        "ranks",
+        True,
+        _NULL,
+    ),
+    Method(
+        "quade",
+        "omnibus",
+        "Quade test",
+        "Do the occasions rank alike, weighted by how much each subject varies?",
+        "values",
+        True,
+        ("substitute", *_NULL),
+    ),
+    Method(
+        "aligned_ranks",
+        "omnibus",
+        "Aligned-ranks test",
+        "Do the occasions differ, by ranks of the subject-centred values?",
+        "values",
+        True,
+        ("substitute", *_NULL),
+    ),
+    Method(
+        "normal_scores",
+        "omnibus",
+        "Normal-scores test",
+        "Do the occasions rank alike within subjects, extreme ranks weighted?",
+        "ranks",
+        True,
+        _NULL,
+    ),
+    Method(
+        "mean_permutation",
+        "omnibus",
+        "Permutation F test",
+        "Do the occasion means differ, by permuting values within subjects?",
+        "values",
+        True,
+        ("substitute", *_NULL),
+    ),
+    Method(
+        "winsorized_permutation",
+        "omnibus",
+        "Winsorized permutation test",
+        "Do the occasions differ, with extreme subject-centred values pulled in?",
+        "values",
+        True,
+        ("trim", "substitute", *_NULL),
+    ),
+    Method(
+        "row_flip",
+        "omnibus",
+        "Whole-row sign flip",
+        "Do the occasions differ, whatever their spread and correlation?",
+        "values",
+        False,
+        ("substitute", *_NULL),
+    ),
+    Method(
+        "skillings_mack",
+        "omnibus",
+        "Skillings-Mack test",
+        "Do the occasions rank alike within subjects, some visits missing?",
+        "ranks",
+        True,
+        _NULL,
+    ),
+    Method(
+        "page_trend",
+        "omnibus",
+        "Page trend test",
+        "Do the values rise over the occasions in a stated order?",
+        "ranks",
+        True,
+        ("order", "scores", "alternative", *_NULL),
+        ("order",),
+    ),
+    Method(
+        "anova",
+        "omnibus",
+        "Within-subject analysis of variance",
+        "Do the occasion means differ, under a normal model?",
+        "values",
+        False,
+        ("substitute",),
+    ),
+    Method(
+        "signed_rank",
+        "pair",
+        "Wilcoxon signed-rank test",
+        "Did the values shift between two occasions, by direction and size?",
+        "values",
+        True,
+        ("alternative", "zeros", "substitute", "level", *_NULL),
+    ),
+    Method(
+        "sign_test",
+        "pair",
+        "Sign test",
+        "Do more subjects rise than fall between two occasions?",
+        "ranks",
+        True,
+        ("alternative", "level", *_NULL),
+    ),
+    Method(
+        "sign_flip",
+        "pair",
+        "Sign-flip test",
+        "Did the mean change between two occasions, by flipping signs?",
+        "values",
+        True,
+        ("alternative", "substitute", "level", *_NULL),
+    ),
+    Method(
+        "paired_t",
+        "pair",
+        "Paired t test",
+        "Does the mean difference between two occasions differ from zero, under a normal model?",
+        "values",
+        False,
+        ("alternative", "substitute", "level"),
+    ),
+)
+
+
+def method(name: str) -> Method:
+    """Return the registered method called `name`."""
+    for candidate in METHODS:
+        if candidate.name == name:
+            return candidate
+    raise KeyError(name)
