@@ -1,0 +1,96 @@
+"""Alternative texts: what a figure shows, in words and in the numbers of the results."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from robustrm._format import counted, level_text, listing, number, p_phrase, span
+from robustrm.figures.changes import changes_of
+from robustrm.figures.labels import one_line, with_unit
+from robustrm.methods.adjusting import TITLES
+from robustrm.methods.summary import OccasionSummary
+from robustrm.results import Comparison, Estimate, FollowUps
+from robustrm.table import OccasionTable
+
+
+def describe_trajectories(
+    table: OccasionTable, summary: Sequence[OccasionSummary] | None = None
+) -> str:
+    """Say in words what :func:`trajectories` draws; no identifier is named."""
+    medians = {s.occasion: s.median for s in summary or ()}
+    columns = [
+        _occasion_words(table, j, medians.get(occasion))
+        for j, occasion in enumerate(table.occasions)
+    ]
+    gaps = int(table.missing.sum())
+    parts = [
+        f"Lines of {with_unit(table.marker, table.unit)} over {table.n_occasions} occasions, "
+        f"one line a subject, {counted(table.n_subjects, 'subject')}.",
+        f"{'; '.join(columns)}.",
+    ]
+    if table.censored.any():
+        parts.append("Values beyond a limit are open symbols at the limit.")
+    if gaps:
+        parts.append(f"{counted(gaps, 'missing value')} left a gap in the lines.")
+    return one_line(" ".join(parts))
+
+
+def describe_changes(table: OccasionTable, comparison: Comparison) -> str:
+    """Say in words what :func:`paired_changes` draws; no identifier is named."""
+    changes = changes_of(table, comparison)
+    neutral = 1.0 if comparison.result.scale == "log" else 0.0
+    counts = {
+        "fell": int((changes.values < neutral).sum()),
+        "rose": int((changes.values > neutral).sum()),
+        "did not change": int((changes.values == neutral).sum()),
+        "unknown, both values beyond the limit": changes.n_unknown,
+    }
+    seen = listing([f"{count} {what}" for what, count in counts.items() if count])
+    parts = [
+        f"Changes of {table.marker} from {comparison.first} to {comparison.second} in "
+        f"{counted(changes.n, 'subject')}: {seen or 'none'}.",
+        f"Estimate: {_estimate_words(comparison.estimate)}.",
+    ]
+    if changes.bounded.any():
+        bounded = int(changes.bounded.sum())
+        parts.append(f"{counted(bounded, 'change')} only bounded: open symbols.")
+    return one_line(" ".join(parts))
+
+
+def describe_comparisons(follow_ups: FollowUps) -> str:
+    """Say in words what :func:`comparisons` draws."""
+    rows = [
+        f"{c.label}: n = {c.result.n_subjects}, {_estimate_words(c.estimate)}, "
+        f"{_p_words(c.p_adjusted)}"
+        for c in follow_ups
+    ]
+    whose = "each" if follow_ups.intervals == "separate" else "together"
+    return one_line(
+        f"Estimates of {counted(len(follow_ups), 'comparison')} with {follow_ups.intervals} "
+        f"intervals ({level_text(follow_ups.level)} {whose}) and P values "
+        f"({TITLES[follow_ups.adjust]}). {'; '.join(rows)}."
+    )
+
+
+def _occasion_words(table: OccasionTable, j: int, median: float | None) -> str:
+    remarks = [f"n = {int((~table.missing[:, j]).sum())}"]
+    for flags, side in ((table.below, "below"), (table.above, "above")):
+        if flags[:, j].any():
+            remarks.append(f"{int(flags[:, j].sum())} {side} a limit")
+    middle = "" if median is None else f"median {number(median)}, "
+    return f"{table.occasions[j]}: {middle}{', '.join(remarks)}"
+
+
+def _p_words(p: float) -> str:
+    return "not tested" if math.isnan(p) else p_phrase(p)
+
+
+def _estimate_words(estimate: Estimate | None) -> str:
+    if estimate is None:
+        return "not estimable"
+    unit = f" {estimate.unit}" if estimate.unit else ""
+    head = f"{estimate.name} {number(estimate.value)}{unit}"
+    if estimate.level is None or estimate.low is None:
+        return f"{head}, interval not estimable"
+    return f"{head} ({level_text(estimate.level)} interval {span(estimate.low, estimate.high)})"
