@@ -190,7 +190,7 @@ def complete_pair(table: OccasionTable, first: str, second: str, title: str) -> 
     TooFewError
         When no subject has both.
     """
-    pair = table.comparable((first, second))
+    pair = table.pair(first, second)
     if pair.n_subjects < 1:
         raise TooFewError(
             f"{title} of {second!r} against {first!r} needs at least 1 subject with both, got none."

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from robustrm.kernels.ranks import midranks
+from robustrm.kernels.scores import aligned_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -108,9 +108,7 @@ def aligned_ranks(
 
 
 def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProblem:
-    """Return the test on a table: scores are 2k times the centred ranks, which are whole."""
+    """Return the test on a table: scores are 2k times the centred ranks."""
     used = complete_rows(table, "The aligned-ranks test")
-    aligned = used.substitute(substitute).centred_scores()
-    doubled = 2 * midranks(aligned.ravel()).reshape(aligned.shape)
-    scores = used.n_occasions * doubled - doubled.sum(axis=1, keepdims=True)
+    scores = aligned_scores(used.substitute(substitute).centred_scores())
     return permuted(used, scores, chi2_statistic(scores))

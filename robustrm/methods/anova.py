@@ -13,7 +13,7 @@ from robustrm.errors import TooFewError
 from robustrm.kernels import anova as kernel
 from robustrm.results import Note, TestResult
 from robustrm.table import OccasionTable
-from robustrm.ties import Floats
+from robustrm.ties import Floats, power_of_two
 
 
 def anova(table: OccasionTable, *, substitute: str = "half") -> TestResult:
@@ -108,6 +108,8 @@ def anova(table: OccasionTable, *, substitute: str = "half") -> TestResult:
 
 def _table(y: Floats) -> tuple[dict[str, Any], list[Note]]:
     n, k = y.shape
+    size = power_of_two(y)  # F, epsilon and W do not depend on it
+    y = y / size
     squares = kernel.sums_of_squares(y)
     occasion, subject, error = (
         float(part) for part in (squares.occasion, squares.subject, squares.error)
@@ -142,9 +144,9 @@ def _table(y: Floats) -> tuple[dict[str, Any], list[Note]]:
         "mauchly_chi2": float(chi2),
         "mauchly_df": df,
         "mauchly_p": float(p),
-        "ss_occasion": occasion,
-        "ss_subject": subject,
-        "ss_error": error,
+        "ss_occasion": occasion * size * size,
+        "ss_subject": subject * size * size,
+        "ss_error": error * size * size,
         "eta2_partial": _share(occasion, occasion + error, rounding),
         "eta2_generalized": _share(occasion, occasion + subject + error, rounding),
     }, notes

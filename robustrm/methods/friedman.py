@@ -6,8 +6,8 @@ import math
 from collections.abc import Sequence
 from typing import Any
 
-from robustrm.kernels.ranks import midranks
 from robustrm.kernels.score_statistics import between, f_of, total
+from robustrm.kernels.scores import rank_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -114,9 +114,9 @@ def friedman(
 
 
 def problem(table: OccasionTable) -> AdditiveProblem:
-    """Return the test on a table: scores are twice the centred mid-ranks, which are whole."""
+    """Return the test on a table."""
     used = complete_rows(table, "Friedman's test")
-    scores = 2 * midranks(used.order_codes()) - (used.n_occasions + 1)
+    scores = rank_scores(used.order_codes())
     return permuted(used, scores, chi2_statistic(scores))
 
 

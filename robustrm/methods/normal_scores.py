@@ -4,10 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-import numpy as np
-from scipy import special
-
-from robustrm.kernels.ranks import midranks
+from robustrm.kernels import scores as kernels
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -101,8 +98,5 @@ def normal_scores(
 def problem(table: OccasionTable) -> AdditiveProblem:
     """Return the test on a table."""
     used = complete_rows(table, "The normal-scores test")
-    quantiles = special.ndtri(midranks(used.order_codes()) / (used.n_occasions + 1))
-    scores = quantiles - quantiles.mean(axis=1, keepdims=True)
-    # a row that is tied throughout is centred to rounding, not to zero
-    scores[np.ptp(quantiles, axis=1) == 0] = 0.0
+    scores = kernels.normal_scores(used.order_codes())
     return permuted(used, scores, chi2_statistic(scores))

@@ -12,7 +12,7 @@ from robustrm._checks import Alternative, check_alternative, check_member, check
 from robustrm.errors import ArgumentError
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import permutation_tables
-from robustrm.kernels.ranks import midranks
+from robustrm.kernels.scores import rank_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -141,7 +141,7 @@ def problem(
     labels, weights = _declared(table, order, scores)
     used = complete_rows(table.select(occasions=labels), "Page's trend test")
     n, k = used.values.shape
-    doubled = 2 * midranks(used.order_codes()) - (k + 1)
+    doubled = rank_scores(used.order_codes())
     middle = n * (k + 1) * float(weights.sum()) / 2
     return AdditiveProblem(
         used,

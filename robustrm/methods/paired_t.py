@@ -12,6 +12,7 @@ from robustrm._checks import Alternative, check_alternative, check_level
 from robustrm.errors import TooFewError
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
+from robustrm.ties import power_of_two
 
 
 def paired_t(
@@ -70,7 +71,7 @@ def paired_t(
     """
     direction = check_alternative(alternative)
     check_level(level)
-    used = table.comparable((first, second)).substitute(substitute)
+    used = table.pair(first, second).substitute(substitute)
     gaps, _ = used.paired(first, second)
     n = gaps.values.size
     if n < 2:
@@ -78,8 +79,9 @@ def paired_t(
             f"The paired t test of {second!r} against {first!r} needs at least 2 subjects "
             f"with both, got {n}."
         )
-    mean = float(np.mean(gaps.values))
-    error = float(np.std(gaps.values, ddof=1)) / math.sqrt(n)
+    size = power_of_two(gaps.values)
+    mean = float(np.mean(gaps.values / size)) * size
+    error = float(np.std(gaps.values / size, ddof=1)) / math.sqrt(n) * size
     constant = len(set(gaps.values.tolist())) == 1
     t = math.nan if constant else mean / error
     margin = float(special.stdtrit(n - 1, (1 + level) / 2)) * error

@@ -5,7 +5,9 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-from robustrm.kernels.ranks import midranks
+import numpy as np
+
+from robustrm.kernels.scores import quade_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -115,9 +117,8 @@ def quade(
 
 
 def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProblem:
-    """Return the test on a table: scores are four times Quade's, which are whole."""
+    """Return the test on a table: scores are four times Quade's."""
     used = complete_rows(table, "Quade's test")
-    weights = midranks(used.substitute(substitute).spans().sizes)
-    centred = midranks(used.order_codes()) - (used.n_occasions + 1) / 2
-    scores = 4 * weights[:, None] * centred
+    spans = used.substitute(substitute).spans().sizes.astype(np.float64)
+    scores = quade_scores(used.order_codes(), spans)
     return permuted(used, scores, f_statistic(scores))

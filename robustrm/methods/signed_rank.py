@@ -15,7 +15,7 @@ from robustrm._format import counted, level_text, number, p_cell, percent, span
 from robustrm.kernels import walsh
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import sign_tables
-from robustrm.kernels.ranks import midranks
+from robustrm.kernels.scores import signed_ranks
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -222,30 +222,15 @@ def problem(
     zeros: str = "pratt",
     substitute: str | float = "half",
 ) -> AdditiveProblem:
-    """Return the test on a pair of occasions: scores, twice the signed ranks, are whole."""
+    """Return the test on a pair of occasions: scores are twice the signed ranks."""
     pair = complete_pair(table, first, second, "The signed-rank test").substitute(substitute)
     gaps, _ = pair.paired(first, second)
-    ranks = signed_ranks(gaps, zeros)
-    scores = 2 * ranks * gaps.signs
-    middle = float(ranks.sum()) / 2
+    scores = signed_ranks(gaps.sizes.astype(float), gaps.signs.astype(float), zeros)
+    middle = float(np.abs(scores).sum()) / 4
     form = linear(1.0, side=check_alternative(alternative))
     return AdditiveProblem(
         pair, scores, sign_tables(scores), form, lambda line: np.asarray(line / 4 + middle)
     )
-
-
-def signed_ranks(gaps: Differences, zeros: str) -> Floats:
-    """Return the ranks of the absolute differences, 0 for zero differences.
-
-    Pratt ranks the zeros too and then leaves them out; dropping leaves them out first.
-    """
-    moved = gaps.sizes > 0
-    ranks = np.zeros(gaps.sizes.size)
-    if zeros == "pratt":
-        ranks[moved] = midranks(gaps.sizes)[moved]
-    else:
-        ranks[moved] = midranks(gaps.sizes[moved])
-    return ranks
 
 
 def _core(pair: OccasionTable, settings: _Settings, substitute: str | float) -> _Core:

@@ -12,7 +12,7 @@ from robustrm._format import listing
 from robustrm.errors import TooFewError
 from robustrm.kernels.null.forms import Quadratic, quadratic
 from robustrm.kernels.null.tables import permutation_tables
-from robustrm.kernels.ranks import midranks
+from robustrm.kernels.scores import block_scores
 from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, omnibus_result
 from robustrm.results import Note, TestResult
 from robustrm.table import OccasionTable
@@ -128,16 +128,10 @@ def problem(table: OccasionTable) -> AdditiveProblem:
     """Return the test on a table: each subject's scores permuted over the occasions it has."""
     used = _used(table)
     observed = ~used.missing
-    scores = block_scores(midranks(used.order_codes()))
+    scores = block_scores(used.order_codes())
     form = quadratic(_root_of_inverse(conditional_covariance(scores, observed)))
     tables = permutation_tables(scores, observed=observed)
     return AdditiveProblem(used, scores, tables, form, np.asarray)
-
-
-def block_scores(ranks: Floats) -> Floats:
-    """Return the scores of mid-ranks (n, k) among observed cells; 0 where missing."""
-    sizes = np.sum(~np.isnan(ranks), axis=1, keepdims=True)
-    return np.asarray(np.nan_to_num(np.sqrt(12 / (sizes + 1)) * (ranks - (sizes + 1) / 2)))
 
 
 def conditional_covariance(scores: Floats, observed: Bools) -> Floats:

@@ -4,10 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-import numpy as np
-
 from robustrm.errors import ArgumentError
-from robustrm.kernels.location import cut
+from robustrm.kernels.scores import winsorized_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
     NullOptions,
@@ -20,7 +18,6 @@ from robustrm.methods.additive import (
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
-from robustrm.ties import Floats
 
 
 def winsorized_permutation(
@@ -115,15 +112,3 @@ def problem(
     used = complete_rows(table, "The Winsorized permutation test")
     scores = winsorized_scores(used.substitute(substitute).centred_scores(), trim)
     return permuted(used, scores, f_statistic(scores))
-
-
-def winsorized_scores(centred: Floats, trim: float) -> Floats:
-    """Return row-centred values (..., n, k) clipped at their pooled quantiles, centred again.
-
-    Multiplied by k, which keeps whole numbers whole.
-    """
-    n, k = centred.shape[-2:]
-    pooled = np.sort(centred.reshape(*centred.shape[:-2], n * k), axis=-1)[..., None]
-    g = cut(n * k, trim)
-    clipped = np.clip(centred, pooled[..., g : g + 1, :], pooled[..., n * k - g - 1 : n * k - g, :])
-    return np.asarray(k * clipped - clipped.sum(axis=-1, keepdims=True))
