@@ -20,10 +20,12 @@ from robustrm.errors import (
 )
 from robustrm.methods.aligned_ranks import aligned_ranks
 from robustrm.methods.anova import anova
+from robustrm.methods.attainable import Attainable, attainable
 from robustrm.methods.follow_up import follow_up
 from robustrm.methods.friedman import friedman
 from robustrm.methods.mean_permutation import mean_permutation
 from robustrm.methods.normal_scores import normal_scores
+from robustrm.methods.null_distribution import NullDistribution, null_distribution
 from robustrm.methods.page_trend import page_trend
 from robustrm.methods.paired_t import paired_t
 from robustrm.methods.quade import quade
@@ -43,12 +45,14 @@ __version__ = "0.1.0"
 __all__ = [
     "Analysis",
     "ArgumentError",
+    "Attainable",
     "BudgetError",
     "Comparison",
     "DataError",
     "Estimate",
     "FollowUps",
     "Note",
+    "NullDistribution",
     "OccasionTable",
     "Plan",
     "PlanError",
@@ -59,10 +63,12 @@ __all__ = [
     "aligned_ranks",
     "analyze",
     "anova",
+    "attainable",
     "follow_up",
     "friedman",
     "mean_permutation",
     "normal_scores",
+    "null_distribution",
     "page_trend",
     "paired_t",
     "quade",

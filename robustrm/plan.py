@@ -18,7 +18,7 @@ from typing import Any, Literal, Self, cast
 
 from robustrm._checks import STAGES, check_choice, check_draws, check_level, nearest
 from robustrm.errors import ArgumentError, PlanError
-from robustrm.methods.registry import ADJUSTMENTS, FAMILIES, METHODS
+from robustrm.methods.registry import ADJUSTMENTS, CLOSED_METHODS, FAMILIES, METHODS
 from robustrm.results import Scale
 
 MarkerKind = Literal["concentration", "count", "score"]
@@ -56,8 +56,9 @@ class Plan:
         Method for the overall test, which supports the planned contrasts.
     zeros : {"pratt", "drop"}
         What the signed-rank test does with zero differences.
-    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh"}
-        Adjustment of the p values over the family.
+    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh", "closed"}
+        Adjustment of the p values over the family; ``"closed"`` takes `pair` ``"sign_flip"``
+        or ``"aligned_ranks"``.
     intervals : {"separate", "simultaneous"}
         Whether intervals hold the level each alone or all together.
     level : float
@@ -115,7 +116,7 @@ class Plan:
         if self.scale is not None:
             check_choice("scale", self.scale, ("raw", "log"))
         check_choice("direction", self.direction, ("greater", "less"))
-        check_choice("pair", self.pair, methods_for("pair"))
+        check_choice("pair", self.pair, _pair_methods(self.adjust))
         check_choice("omnibus", self.omnibus, methods_for("omnibus"))
         check_level(self.level)
         if self.sides not in (1, 2) or isinstance(self.sides, bool):
@@ -197,6 +198,10 @@ class Plan:
 def methods_for(kind: str) -> tuple[str, ...]:
     """Return the names of the methods of one kind that a plan can name: no open options."""
     return tuple(m.name for m in METHODS if m.kind == kind and not m.requires)
+
+
+def _pair_methods(adjust: str) -> tuple[str, ...]:
+    return CLOSED_METHODS if adjust == "closed" else methods_for("pair")
 
 
 def _refuse_unknown(values: Mapping[str, Any], error: type[ArgumentError | PlanError]) -> None:

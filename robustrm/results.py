@@ -296,7 +296,7 @@ class Comparison(_Record):
     result : TestResult
         The test of this pair alone, with its unadjusted p value.
     p_adjusted : float
-        p value adjusted over the family; NaN where the pair could not be tested.
+        The p value adjusted over the family; NaN where the pair could not be tested.
     """
 
     first: str
@@ -383,6 +383,7 @@ class FollowUps(_Record):
         headings = ["comparison", "n", "estimate", "interval", "P", f"P ({self.adjust})"]
         rows = [_comparison_cells(comparison) for comparison in self.comparisons]
         lines = [aligned(headings, rows)]
+        lines.extend(_deciding_partition(c) for c in self if "partition" in c.result.details)
         lines.extend(f"Note: {note}" for note in self.notes)
         return "\n".join(lines)
 
@@ -418,6 +419,14 @@ def _comparison_cells(comparison: Comparison) -> list[str]:
         p_cell(comparison.p_value),
         p_cell(comparison.p_adjusted),
     ]
+
+
+def _deciding_partition(comparison: Comparison) -> str:
+    details = comparison.result.details
+    return (
+        f"{comparison.label}: decided by {details['partition']} ({details['partition_null']}); "
+        f"Holm {p_cell(details['p_holm'])}"
+    )
 
 
 def note_codes(notes: Sequence[Note]) -> tuple[str, ...]:

@@ -446,9 +446,7 @@ class OccasionTable:
         On the log scale the differences are log ratios. Equality is judged in units of the
         reporting step where there is one.
         """
-        i, j = self.column("first", first), self.column("second", second)
-        if i == j:
-            raise ArgumentError(f"`first` and `second` must differ, got {first!r} twice.")
+        i, j = self._columns(first, second)
         rows = np.flatnonzero(~self.missing[:, i] & ~self.missing[:, j])
         unknown = (self.below[rows, i] & self.below[rows, j]) | (
             self.above[rows, i] & self.above[rows, j]
@@ -457,6 +455,12 @@ class OccasionTable:
         return self._gaps(
             (rows, np.full_like(rows, i)), (rows, np.full_like(rows, j)), unknown
         ), ids
+
+    def _columns(self, first: str, second: str) -> tuple[int, int]:
+        i, j = self.column("first", first), self.column("second", second)
+        if i == j:
+            raise ArgumentError(f"`first` and `second` must differ, got {first!r} twice.")
+        return i, j
 
     def centred_scores(self) -> Floats:
         """Return scores (n, k) proportional to the subject-centred values of complete rows.
@@ -550,6 +554,11 @@ class OccasionTable:
         """
         table = self if occasions is None else self.select(occasions=occasions)
         return (table.complete() if complete else table).recensored().by_content()
+
+    def pair(self, first: str, second: str) -> OccasionTable:
+        """Return the comparable rows of two occasions, the start of every test of a pair."""
+        self._columns(first, second)
+        return self.comparable((first, second))
 
     def recensored(self) -> OccasionTable:
         """Return the table at the limits that all cells share.

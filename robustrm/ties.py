@@ -101,14 +101,27 @@ def order_codes(values: Floats, units: Ints | None, below: Bools, above: Bools) 
     return codes
 
 
+def power_of_two(values: Floats) -> float:
+    """Return the power of two at the largest magnitude, 1 where all are zero.
+
+    Dividing by it is exact, and keeps the squares of huge and of tiny values within a float.
+    """
+    largest = float(np.max(np.abs(values), initial=0.0))
+    return math.ldexp(1.0, math.frexp(largest)[1] - 1) if largest else 1.0
+
+
 def centred(values: Floats, units: Ints | None) -> Floats:
-    """Return rows (n, k) less their means, times k and in whole units where there are units."""
+    """Return rows (n, k) less their means, times k and in whole units where there are units.
+
+    Without units the rows are in a power of two of their own unit.
+    """
     k = values.shape[1]
     if units is not None and int(np.abs(units).max(initial=0)) * 2 * k < _LARGEST_INTEGER:
         return np.asarray(k * units - units.sum(axis=1, keepdims=True), dtype=np.float64)
-    scores = np.asarray(values - values.mean(axis=1, keepdims=True))
+    unit = values / power_of_two(values)
+    scores = np.asarray(unit - unit.mean(axis=1, keepdims=True))
     largest = float(np.max(np.abs(scores), initial=0.0))
-    noise = 4 * float(np.finfo(float).eps * np.max(np.abs(values), initial=0.0))
+    noise = 4 * float(np.finfo(float).eps * np.max(np.abs(unit), initial=0.0))
     scores[np.abs(scores) <= noise] = 0.0
     return merged(scores, max(MERGE * largest, noise))
 
@@ -180,7 +193,8 @@ def differences_of_floats(first: Floats, second: Floats, unknown: Bools) -> Diff
     tolerance = max(MERGE * float(np.max(np.abs(gaps))), float(noise))
     gaps = np.where(np.abs(gaps) <= tolerance, 0.0, gaps)
     sizes = merged(np.abs(gaps), tolerance)
-    return _coded(gaps, sizes.tolist(), np.sign(gaps), unknown)
+    scores = gaps / power_of_two(gaps)
+    return _coded(gaps, sizes.tolist(), np.sign(gaps), unknown, scores=scores)
 
 
 def _coded(

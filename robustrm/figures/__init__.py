@@ -8,10 +8,12 @@ from robustrm.figures.changes import paired_changes, paired_figure
 from robustrm.figures.describing import (
     describe_changes,
     describe_comparisons,
+    describe_null,
     describe_trajectories,
 )
 from robustrm.figures.intervals import comparisons
 from robustrm.figures.lines import trajectories
+from robustrm.figures.nulls import null_law
 from robustrm.figures.picture import Picture, pictures
 from robustrm.figures.saving import figure_bytes
 
@@ -20,8 +22,10 @@ __all__ = [
     "comparisons",
     "describe_changes",
     "describe_comparisons",
+    "describe_null",
     "describe_trajectories",
     "figure_bytes",
+    "null_law",
     "paired_changes",
     "paired_figure",
     "pictures",

@@ -9,8 +9,9 @@ from robustrm._format import counted, level_text, listing, number, p_phrase, spa
 from robustrm.figures.changes import changes_of
 from robustrm.figures.labels import one_line, with_unit
 from robustrm.methods.adjusting import TITLES
+from robustrm.methods.null_distribution import NullDistribution
 from robustrm.methods.summary import OccasionSummary
-from robustrm.results import Comparison, Estimate, FollowUps
+from robustrm.results import Comparison, Estimate, FollowUps, TestResult
 from robustrm.table import OccasionTable
 
 
@@ -70,6 +71,19 @@ def describe_comparisons(follow_ups: FollowUps) -> str:
         f"Estimates of {counted(len(follow_ups), 'comparison')} with {follow_ups.intervals} "
         f"intervals ({level_text(follow_ups.level)} {whose}) and P values "
         f"({TITLES[follow_ups.adjust]}). {'; '.join(rows)}."
+    )
+
+
+def describe_null(title: str, null: NullDistribution, result: TestResult) -> str:
+    """Say in words what :func:`null_law` draws."""
+    how = (
+        "every arrangement counted"
+        if null.null == "exact"
+        else f"{counted(len(null.values), 'value')} from 9,999 random arrangements"
+    )
+    return one_line(
+        f"Null distribution of {null.statistic_name} of the {title}, {how}: observed value "
+        f"{number(null.observed, 4)}, n = {result.n_subjects}, {p_phrase(result.p_value)}."
     )
 
 

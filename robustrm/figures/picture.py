@@ -15,7 +15,9 @@ from robustrm.figures.changes import paired_figure
 from robustrm.figures.intervals import comparisons
 from robustrm.figures.labels import one_line
 from robustrm.figures.lines import trajectories
+from robustrm.figures.nulls import null_law
 from robustrm.figures.saving import figure_bytes
+from robustrm.methods.registry import method as registered
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -55,8 +57,8 @@ def pictures(analysis: Analysis) -> tuple[Picture, ...]:
     Returns
     -------
     tuple of Picture
-        All subjects over the occasions, each planned comparison that has subjects, and the
-        planned comparisons together.
+        All subjects over the occasions, each planned comparison that has subjects, the planned
+        comparisons together, and the null distribution of the overall test.
 
     Notes
     -----
@@ -89,6 +91,15 @@ def _drawn(analysis: Analysis) -> Iterator[Picture]:
         alt=describing.describe_comparisons(primary),
         figure=_figure_of(comparisons(primary)),
     )
+    null = analysis.null_distribution
+    if null is not None and analysis.omnibus is not None:
+        title = registered(null.method).title
+        yield Picture(
+            name="null-distribution",
+            title=one_line(f"{table.marker}: {title}, null distribution"),
+            alt=describing.describe_null(title, null, analysis.omnibus),
+            figure=_figure_of(null_law(null)),
+        )
 
 
 def _figure_of(axes: Axes) -> Figure:

@@ -97,6 +97,8 @@ class AdditiveProblem:
         Quadratic or linear form of their sum.
     statistic : callable
         From the value of the form to the statistic that readers know, rising (batched).
+    symbol : str
+        Symbol or name of that statistic.
     """
 
     used: OccasionTable
@@ -104,6 +106,7 @@ class AdditiveProblem:
     tables: tuple[Table, ...]
     form: Form
     statistic: Callable[[Floats], Floats]
+    symbol: str
 
     @property
     def observed(self) -> Floats:
@@ -140,30 +143,29 @@ class AdditiveProblem:
             thresholds=tuple(options.thresholds),
             rng=np.random.default_rng(options.rng),
         )
+        return NullTail(found, self.smallest_p, _monte_carlo_notes(found, options.thresholds))
+
+    @property
+    def smallest_p(self) -> float | None:
+        """The smallest p value any arrangement could give; None beyond the work budget."""
         smallest = smallest_tail(self.tables, self.form)
-        return NullTail(
-            found,
-            None if smallest is None else smallest.p_value,
-            _monte_carlo_notes(found, options.thresholds),
-        )
+        return None if smallest is None else smallest.p_value
 
 
-def permuted(
-    used: OccasionTable, scores: Floats, statistic: Callable[[Floats], Floats]
-) -> AdditiveProblem:
-    """Let each subject's scores (n, k) be permuted over the occasions: T = Σ_j (S_j − mean)²."""
+def chi2_problem(used: OccasionTable, scores: Floats) -> AdditiveProblem:
+    """Let each subject's scores (n, k) be permuted over the occasions; report χ²."""
+    statistic = functools.partial(chi2_of, a=float(total(scores)), k=scores.shape[1])
     form = centring(scores.shape[1])
-    return AdditiveProblem(used, scores, permutation_tables(scores), form, statistic)
+    return AdditiveProblem(used, scores, permutation_tables(scores), form, statistic, "χ²")
 
 
-def chi2_statistic(scores: Floats) -> Callable[[Floats], Floats]:
-    """Return the map from T to χ² for scores (n, k)."""
-    return functools.partial(chi2_of, a=float(total(scores)), k=scores.shape[1])
-
-
-def f_statistic(scores: Floats) -> Callable[[Floats], Floats]:
-    """Return the map from T to F for scores (n, k)."""
-    return functools.partial(f_of, a=float(total(scores)), n=scores.shape[0])
+def f_problem(
+    used: OccasionTable, scores: Floats, tables: Sequence[Table] | None = None
+) -> AdditiveProblem:
+    """Let each subject's scores (n, k) be permuted, or as `tables` say; report F."""
+    statistic = functools.partial(f_of, a=float(total(scores)), n=scores.shape[0])
+    rows = permutation_tables(scores) if tables is None else tuple(tables)
+    return AdditiveProblem(used, scores, rows, centring(scores.shape[1]), statistic, "F")
 
 
 def complete_rows(table: OccasionTable, title: str) -> OccasionTable:
@@ -218,7 +220,6 @@ def omnibus_result(
     options: NullOptions,
     *,
     method: str,
-    statistic_name: str,
     estimand: str,
     df: tuple[float, ...] = (),
     hypothesis: str = EXCHANGEABLE,
@@ -234,7 +235,7 @@ def omnibus_result(
         The test on its table.
     options : NullOptions
         How the null distribution is to be found.
-    method, statistic_name, estimand, df, hypothesis, details, notes, alternative
+    method, estimand, df, hypothesis, details, notes, alternative
         Fields of the result.
 
     Returns
@@ -246,7 +247,7 @@ def omnibus_result(
     return TestResult(
         method=method,
         statistic=problem.observed_statistic,
-        statistic_name=statistic_name,
+        statistic_name=problem.symbol,
         df=df,
         **found.fields(),
         n_subjects=used.n_subjects,

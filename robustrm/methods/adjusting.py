@@ -6,7 +6,7 @@ import math
 from collections.abc import Sequence
 
 from robustrm._checks import check_choice
-from robustrm.methods.registry import ADJUSTMENTS
+from robustrm.methods.registry import P_ADJUSTMENTS
 
 # our names on the left, those of statsmodels on the right
 _NAMES = {
@@ -23,6 +23,7 @@ TITLES = {
     "hochberg": "Hochberg",
     "hommel": "Hommel",
     "bh": "Benjamini-Hochberg",
+    "closed": "closed permutation testing",
 }
 
 
@@ -46,7 +47,7 @@ def adjusted(p_values: Sequence[float], method: str) -> list[float]:
     >>> [round(p, 3) for p in adjusted([0.01, 0.04, math.nan], "holm")]
     [0.03, 0.08, nan]
     """
-    check_choice("adjust", method, ADJUSTMENTS)
+    check_choice("adjust", method, P_ADJUSTMENTS)
     if method == "none" or not p_values:
         return list(p_values)
     from statsmodels.stats.multitest import multipletests

@@ -10,10 +10,9 @@ from robustrm.methods.additive import (
     NullOptions,
     Rng,
     chi2_details,
-    chi2_statistic,
+    chi2_problem,
     complete_rows,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -97,7 +96,6 @@ def aligned_ranks(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="aligned_ranks",
-        statistic_name="χ²",
         df=(k - 1,),
         estimand="shift of the subject-centred values between occasions, by ranks",
         details={
@@ -111,4 +109,4 @@ def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProble
     """Return the test on a table: scores are 2k times the centred ranks."""
     used = complete_rows(table, "The aligned-ranks test")
     scores = aligned_scores(used.substitute(substitute).centred_scores())
-    return permuted(used, scores, chi2_statistic(scores))
+    return chi2_problem(used, scores)

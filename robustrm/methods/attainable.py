@@ -4,13 +4,25 @@ from __future__ import annotations
 
 import dataclasses
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
 
 from robustrm._checks import check_choice, check_count
 from robustrm._format import counted, number
+from robustrm.errors import TooFewError
 from robustrm.methods.adjusting import TITLES, adjusted
-from robustrm.methods.registry import ADJUSTMENTS
+from robustrm.methods.closed import MOST_OCCASIONS, closed_scores, smallest_closed
+from robustrm.methods.follow_up import declared_pairs
+from robustrm.methods.null_distribution import problem_of
+from robustrm.methods.registry import METHODS, P_ADJUSTMENTS
 from robustrm.results import FollowUps
+from robustrm.table import OccasionTable
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,10 +106,129 @@ def attainable_signed_rank(
     """
     check_count("n_subjects", n_subjects)
     check_count("n_comparisons", n_comparisons)
-    check_choice("adjust", adjust, ADJUSTMENTS)
+    check_choice("adjust", adjust, P_ADJUSTMENTS)
     smallest = min(1.0, sides * math.ldexp(1.0, -n_subjects))
     best = adjusted([smallest] * n_comparisons, adjust)
     return Attainable(n_subjects, n_comparisons, adjust, smallest, min(best), alpha)
+
+
+def attainable(
+    table: OccasionTable,
+    *,
+    family: str | Sequence[tuple[str, str]] = "first",
+    alternative: str = "two-sided",
+    substitute: str = "half",
+) -> pd.DataFrame:
+    """Say how small the p value of every test with a null of arrangements can become here.
+
+    Parameters
+    ----------
+    table : OccasionTable
+        The table on the scale of the analysis: its size, gaps, ties and zeros count, not the
+        direction of its changes.
+    family : {"first", "all", "successive"} or list of (earlier, later), default "first"
+        Comparisons that are adjusted together.
+    alternative : {"two-sided", "greater", "less"}, default "two-sided"
+        Direction of the comparisons.
+    substitute : {"half", "root2", "limit"}, default "half"
+        What enters for a value below the limit.
+
+    Returns
+    -------
+    DataFrame
+        One row a test and adjustment: ``method``, ``label`` (the comparison, all occasions, or
+        the family), ``n_subjects``, ``adjust``, ``smallest_p`` (NaN where it cannot be found
+        within the work budget). An adjusted value is the smallest that any comparison can
+        reach when all are at their smallest together. Tests that need a stated order are left
+        out, and so are those with too few subjects.
+
+    Raises
+    ------
+    ArgumentError
+        When the family is not known.
+
+    Examples
+    --------
+    >>> from robustrm.table import OccasionTable
+    >>> table = OccasionTable.from_array(
+    ...     [[9, 7, 6], [4, 3, 2], [12, 8, 5], [7, 5, 4], [6, 5, 3], [8, 4, 3]],
+    ...     occasions=["week 0", "week 6", "week 12"],
+    ... )
+    >>> rows = attainable(table, family="all").set_index(["method", "adjust"]).smallest_p
+    >>> [float(rows["signed_rank", adjust]) for adjust in ("holm", "hommel")]
+    [0.09375, 0.03125]
+    >>> float(rows["sign_flip", "closed"])
+    0.03125
+    """
+    import pandas as pd
+
+    common = {"alternative": alternative, "substitute": substitute}
+    rows: list[_Row] = []
+    for entry in METHODS:
+        if entry.is_additive and not entry.requires:
+            options = {name: value for name, value in common.items() if name in entry.options}
+            if entry.kind == "omnibus":
+                rows.extend(_overall_row(table, entry.name, options))
+            else:
+                rows.extend(_family_rows(table, entry.name, family, options))
+    if alternative == "two-sided" and table.n_occasions <= MOST_OCCASIONS:
+        rows.extend(_closed_rows(table, family, substitute))
+    return pd.DataFrame(rows, columns=["method", "label", "n_subjects", "adjust", "smallest_p"])
+
+
+_Row = tuple[str, str, int, str, float]
+
+
+def _overall_row(table: OccasionTable, name: str, options: dict[str, Any]) -> list[_Row]:
+    try:
+        problem = problem_of(table, name, **options)
+    except TooFewError:
+        return []
+    return [(name, "all occasions", problem.used.n_subjects, "none", _or_nan(problem.smallest_p))]
+
+
+def _family_rows(
+    table: OccasionTable,
+    name: str,
+    family: str | Sequence[tuple[str, str]],
+    options: dict[str, Any],
+) -> list[_Row]:
+    rows: list[_Row] = []
+    for first, second in declared_pairs(table, family):
+        label = f"{second} vs {first}"
+        try:
+            problem = problem_of(table, name, first=first, second=second, **options)
+        except TooFewError:
+            rows.append((name, label, 0, "none", math.nan))
+        else:
+            n = problem.used.n_subjects
+            rows.append((name, label, n, "none", _or_nan(problem.smallest_p)))
+    alone, largest = [row[-1] for row in rows], max(row[2] for row in rows)
+    together = f"family of {len(rows)}"
+    for adjust in P_ADJUSTMENTS[1:]:
+        best = np.array(adjusted(alone, adjust))
+        reached = float(np.nanmin(best)) if np.isfinite(best).any() else math.nan
+        rows.append((name, together, largest, adjust, reached))
+    return rows
+
+
+def _closed_rows(
+    table: OccasionTable, family: str | Sequence[tuple[str, str]], substitute: str
+) -> list[_Row]:
+    used = table.comparable().substitute(substitute)
+    if not used.n_subjects:
+        return []
+    pairs = declared_pairs(used, family)
+    places = [(used.column("family", a), used.column("family", b)) for a, b in pairs]
+    label = f"family of {len(pairs)}"
+    return [
+        (name, label, used.n_subjects, "closed", min(smallest_closed(scores, places)))
+        for name, scores in closed_scores(used).items()
+    ]
+
+
+def _or_nan(value: float | None) -> float:
+    return math.nan if value is None else value
 
 
 def attainable_of(family: FollowUps) -> Attainable:

@@ -10,10 +10,12 @@ from zlib import crc32
 
 import numpy as np
 
-from robustrm._checks import check_choice, check_level, check_member
+from robustrm._checks import check_choice, check_draws, check_level, check_member
 from robustrm._format import counted, level_text, number
 from robustrm.errors import ArgumentError, TooFewError
+from robustrm.methods.additive import Rng, complete_rows
 from robustrm.methods.adjusting import TITLES, adjusted
+from robustrm.methods.closed import check_closed, closed_comparison, closed_scores, closed_tests
 from robustrm.methods.registry import ADJUSTMENTS, FAMILIES, METHODS
 from robustrm.results import Comparison, FollowUps, Note, TestResult
 from robustrm.table import OccasionTable
@@ -30,7 +32,7 @@ def follow_up(
     intervals: str = "separate",
     level: float = 0.95,
     null: str = "auto",
-    rng: np.random.Generator | np.random.SeedSequence | int | None = None,
+    rng: Rng = None,
     options: Mapping[str, Any] | None = None,
 ) -> FollowUps:
     """Compare pairs of occasions as one declared family.
@@ -44,8 +46,10 @@ def follow_up(
     family : {"first", "all", "successive"} or list of (earlier, later), default "first"
         Each later occasion against the first, all pairs, each occasion against the one
         before it, or named pairs.
-    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh"}, default "holm"
-        Adjustment of the p values over the family.
+    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh", "closed"}, default "holm"
+        Adjustment of the p values over the family. ``"closed"`` is closed permutation testing
+        with method ``"sign_flip"`` or ``"aligned_ranks"`` on the rows complete on all
+        occasions; each row says which partition of the occasions gave its p, with Holm beside.
     intervals : {"separate", "simultaneous"}, default "separate"
         Separate intervals hold `level` each; simultaneous ones hold it together, made at
         the Bonferroni level.
@@ -77,6 +81,12 @@ def follow_up(
     says. Holm, Hochberg, Hommel and Bonferroni control the familywise error (Hochberg and
     Hommel under non-negative dependence), Benjamini-Hochberg the false discovery rate.
 
+    Closed permutation testing rejects a pair when every partition of the occasions that joins
+    it is rejected, the scores permuted within the blocks of the partition. It controls the
+    familywise error when each pair's hypothesis means that swapping its two values changes
+    nothing given the other occasions; that is more than a symmetric difference of the pair
+    alone, and under serial correlation with personal trends the error can be larger.
+
     References
     ----------
     .. [1] Holm, S. (1979). A simple sequentially rejective multiple test procedure.
@@ -87,6 +97,10 @@ def follow_up(
        modified Bonferroni test. Biometrika 75, 383-386.
     .. [4] Benjamini, Y. and Hochberg, Y. (1995). Controlling the false discovery rate.
        Journal of the Royal Statistical Society B 57, 289-300.
+    .. [5] Marcus, R., Peritz, E. and Gabriel, K. R. (1976). On closed testing procedures with
+       special reference to ordered analysis of variance. Biometrika 63, 655-660.
+    .. [6] Petrondas, D. A. and Gabriel, K. R. (1983). Multiple comparisons by rerandomization
+       tests. Journal of the American Statistical Association 78, 949-957.
 
     Examples
     --------
@@ -104,19 +118,11 @@ def follow_up(
     pairs = declared_pairs(table, family)
     each = level if intervals == "separate" else 1 - (1 - level) / len(pairs)
     settings = {**(options or {}), "level": each, "null": null}
-    seeds = _streams(rng, pairs)
-    results = [
-        _tested(table, pair, method, settings, seed)
-        for pair, seed in zip(pairs, seeds, strict=True)
-    ]
-    # a parametric p value has no smallest one
-    smallest = [result.details.get("smallest_p") or 0.0 for result in results]
-    comparisons = tuple(
-        Comparison(first, second, result, p)
-        for (first, second), result, p in zip(
-            pairs, results, adjusted([r.p_value for r in results], adjust), strict=True
-        )
-    )
+    root = _root(rng)
+    if adjust == "closed":
+        comparisons, smallest = _closed_family(table, pairs, method, settings, root)
+    else:
+        comparisons, smallest = _tested_family(table, pairs, method, settings, root, adjust)
     return FollowUps(
         comparisons=comparisons,
         method=method,
@@ -124,10 +130,34 @@ def follow_up(
         adjust=adjust,
         intervals=intervals,
         level=level,
-        smallest_p=min(smallest),
-        smallest_p_adjusted=min(adjusted(smallest, adjust)),
+        smallest_p=min(smallest_p(c) for c in comparisons),
+        smallest_p_adjusted=min(smallest),
         notes=_notes(comparisons, adjust, intervals, level),
     )
+
+
+def smallest_p(comparison: Comparison) -> float:
+    """Return the smallest unadjusted p a comparison could have had; 0 where there is none."""
+    # a parametric p value has no smallest one
+    return float(comparison.result.details.get("smallest_p") or 0.0)
+
+
+def _tested_family(
+    table: OccasionTable,
+    pairs: Sequence[Pair],
+    method: str,
+    settings: Mapping[str, Any],
+    root: np.random.SeedSequence,
+    adjust: str,
+) -> tuple[tuple[Comparison, ...], list[float]]:
+    results = [_tested(table, pair, method, settings, _stream(root, pair)) for pair in pairs]
+    p_adjusted = adjusted([result.p_value for result in results], adjust)
+    comparisons = tuple(
+        Comparison(*pair, result, p)
+        for pair, result, p in zip(pairs, results, p_adjusted, strict=True)
+    )
+    # the most favourable outcome has all comparisons at their smallest together
+    return comparisons, adjusted([smallest_p(c) for c in comparisons], adjust)
 
 
 def declared_pairs(table: OccasionTable, family: str | Sequence[Pair]) -> list[Pair]:
@@ -151,17 +181,17 @@ def declared_pairs(table: OccasionTable, family: str | Sequence[Pair]) -> list[P
     return [(a, b) for a, b in pairs]
 
 
-def _streams(
-    rng: np.random.Generator | np.random.SeedSequence | int | None, pairs: Sequence[Pair]
-) -> list[np.random.SeedSequence]:
-    root = rng
-    if isinstance(root, np.random.Generator):
-        root = int(root.integers(2**63))
-    entropy = root.entropy if isinstance(root, np.random.SeedSequence) else root
-    return [
-        np.random.SeedSequence(entropy, spawn_key=(crc32("\x1f".join(pair).encode()),))
-        for pair in pairs
-    ]
+def _root(rng: Rng) -> np.random.SeedSequence:
+    if isinstance(rng, np.random.SeedSequence):
+        return rng
+    if isinstance(rng, np.random.Generator):
+        return np.random.SeedSequence(int(rng.integers(2**63)))
+    return np.random.SeedSequence(rng)
+
+
+def _stream(root: np.random.SeedSequence, pair: Pair) -> np.random.SeedSequence:
+    key = crc32("\x1f".join(pair).encode())
+    return np.random.SeedSequence(root.entropy, spawn_key=(*root.spawn_key, key))
 
 
 def _tested(
@@ -184,6 +214,33 @@ def _tested(
         return entry.load()(table, *pair, **taken)
     except TooFewError as error:
         return _not_estimable(table, pair, method, str(error))
+
+
+def _closed_family(
+    table: OccasionTable,
+    pairs: Sequence[Pair],
+    method: str,
+    settings: Mapping[str, Any],
+    root: np.random.SeedSequence,
+) -> tuple[tuple[Comparison, ...], list[float]]:
+    """Return closed comparisons on the rows complete on all occasions, and their smallest p."""
+    check_closed(method, table.n_occasions, settings)
+    substitute = settings.get("substitute", "half")
+    used = complete_rows(table, "Closed permutation testing").substitute(substitute)
+    tests = closed_tests(
+        closed_scores(used)[method],
+        [(used.column("first", a), used.column("second", b)) for a, b in pairs],
+        used.occasions,
+        stages=check_draws(settings.get("draws")),
+        thresholds=tuple(settings.get("thresholds", (1 - settings["level"],))),
+        root=root,
+    )
+    p_holm = adjusted([test.raw.p_value for test in tests], "holm")
+    comparisons = tuple(
+        closed_comparison(used, pair, method, test, holm, level=settings["level"])
+        for pair, test, holm in zip(pairs, tests, p_holm, strict=True)
+    )
+    return comparisons, [test.smallest for test in tests]
 
 
 def _not_estimable(table: OccasionTable, pair: Pair, method: str, reason: str) -> TestResult:

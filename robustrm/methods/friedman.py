@@ -13,11 +13,10 @@ from robustrm.methods.additive import (
     NullOptions,
     Rng,
     chi2_details,
-    chi2_statistic,
+    chi2_problem,
     complete_rows,
     f_details,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -101,7 +100,6 @@ def friedman(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="friedman",
-        statistic_name="χ²",
         df=(k - 1,),
         estimand="consistency of the rank order of the occasions within subjects",
         details={
@@ -117,7 +115,7 @@ def problem(table: OccasionTable) -> AdditiveProblem:
     """Return the test on a table."""
     used = complete_rows(table, "Friedman's test")
     scores = rank_scores(used.order_codes())
-    return permuted(used, scores, chi2_statistic(scores))
+    return chi2_problem(used, scores)
 
 
 def _iman_davenport(found: AdditiveProblem) -> dict[str, Any]:

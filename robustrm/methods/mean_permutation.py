@@ -10,9 +10,8 @@ from robustrm.methods.additive import (
     Rng,
     complete_rows,
     f_details,
-    f_statistic,
+    f_problem,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -91,7 +90,6 @@ def mean_permutation(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="mean_permutation",
-        statistic_name="F",
         df=beside["f_df"],
         estimand="geometric means" if table.scale == "log" else "arithmetic means",
         details=beside,
@@ -102,4 +100,4 @@ def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProble
     """Return the test on a table: scores are the subject-centred values."""
     used = complete_rows(table, "The mean permutation test")
     scores = used.substitute(substitute).centred_scores()
-    return permuted(used, scores, f_statistic(scores))
+    return f_problem(used, scores)

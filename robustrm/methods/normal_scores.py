@@ -10,10 +10,9 @@ from robustrm.methods.additive import (
     NullOptions,
     Rng,
     chi2_details,
-    chi2_statistic,
+    chi2_problem,
     complete_rows,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -88,7 +87,6 @@ def normal_scores(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="normal_scores",
-        statistic_name="χ²",
         df=(found.scores.shape[1] - 1,),
         estimand="consistency of the rank order of the occasions, extremes weighted",
         details={**chi2_details(found), "score_sums": tuple(found.observed.tolist())},
@@ -99,4 +97,4 @@ def problem(table: OccasionTable) -> AdditiveProblem:
     """Return the test on a table."""
     used = complete_rows(table, "The normal-scores test")
     scores = kernels.normal_scores(used.order_codes())
-    return permuted(used, scores, chi2_statistic(scores))
+    return chi2_problem(used, scores)

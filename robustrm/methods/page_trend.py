@@ -123,7 +123,6 @@ def page_trend(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="page_trend",
-        statistic_name="L",
         estimand=f"trend of the ranks in the order {', '.join(found.used.occasions)}",
         alternative=direction,
         details=details,
@@ -149,6 +148,7 @@ def problem(
         permutation_tables(doubled),
         linear(weights, side=check_alternative(alternative)),
         lambda line: np.asarray(line / 2 + middle),
+        "L",
     )
 
 

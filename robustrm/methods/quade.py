@@ -14,9 +14,8 @@ from robustrm.methods.additive import (
     Rng,
     complete_rows,
     f_details,
-    f_statistic,
+    f_problem,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -109,7 +108,6 @@ def quade(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="quade",
-        statistic_name="F",
         df=beside["f_df"],
         estimand="consistency of the rank order of the occasions, weighted by subjects' ranges",
         details={**beside, "weighted_sums": tuple((found.observed / 4).tolist())},
@@ -121,4 +119,4 @@ def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProble
     used = complete_rows(table, "Quade's test")
     spans = used.substitute(substitute).spans().sizes.astype(np.float64)
     scores = quade_scores(used.order_codes(), spans)
-    return permuted(used, scores, f_statistic(scores))
+    return f_problem(used, scores)

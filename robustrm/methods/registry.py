@@ -9,6 +9,7 @@ from __future__ import annotations
 import importlib
 from collections.abc import Callable
 from dataclasses import dataclass
+from types import ModuleType
 from typing import Literal
 
 from robustrm.results import TestResult
@@ -16,7 +17,9 @@ from robustrm.results import TestResult
 Kind = Literal["omnibus", "pair"]
 
 FAMILIES = ("first", "all", "successive")
-ADJUSTMENTS = ("none", "bonferroni", "holm", "hochberg", "hommel", "bh")
+P_ADJUSTMENTS = ("none", "bonferroni", "holm", "hochberg", "hommel", "bh")
+ADJUSTMENTS = (*P_ADJUSTMENTS, "closed")
+CLOSED_METHODS = ("sign_flip", "aligned_ranks")
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,9 +58,17 @@ class Method:
 
     def load(self) -> Callable[..., TestResult]:
         """Return the function."""
-        module = importlib.import_module(f"robustrm.methods.{self.name}")
-        function: Callable[..., TestResult] = getattr(module, self.name)
+        function: Callable[..., TestResult] = getattr(self.module(), self.name)
         return function
+
+    def module(self) -> ModuleType:
+        """Return the file of the method; an additive test has `problem` in it."""
+        return importlib.import_module(f"robustrm.methods.{self.name}")
+
+    @property
+    def is_additive(self) -> bool:
+        """Whether the test is a sum of scores with a null distribution on the engine."""
+        return "null" in self.options
 
 
 _NULL = ("null", "draws", "thresholds", "rng")

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from robustrm.kernels.null.forms import centring
 from robustrm.kernels.null.tables import sign_tables
 from robustrm.methods.additive import (
     AdditiveProblem,
@@ -12,7 +11,7 @@ from robustrm.methods.additive import (
     Rng,
     complete_rows,
     f_details,
-    f_statistic,
+    f_problem,
     omnibus_result,
 )
 from robustrm.results import TestResult
@@ -91,7 +90,6 @@ def row_flip(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="row_flip",
-        statistic_name="F",
         df=beside["f_df"],
         hypothesis=(
             "Every subject's contrasts between occasions are distributed symmetrically about "
@@ -106,5 +104,4 @@ def problem(table: OccasionTable, *, substitute: str = "half") -> AdditiveProble
     """Return the test on a table: a subject's centred row is itself or its mirror image."""
     used = complete_rows(table, "The whole-row sign flip")
     scores = used.substitute(substitute).centred_scores()
-    form = centring(scores.shape[1])
-    return AdditiveProblem(used, scores, sign_tables(scores), form, f_statistic(scores))
+    return f_problem(used, scores, sign_tables(scores))

@@ -121,7 +121,7 @@ def sign_flip(
     return TestResult(
         method="sign_flip",
         statistic=test.observed_statistic,
-        statistic_name="mean log ratio" if pair.scale == "log" else "mean difference",
+        statistic_name=test.symbol,
         df=(),
         **found.fields(),
         n_subjects=values.size,
@@ -156,7 +156,10 @@ def problem(
     factor = mean / line if line else 1 / gaps.values.size
     form = linear(1.0, side=check_alternative(alternative))
     tables = sign_tables(gaps.scores)
-    return AdditiveProblem(pair, gaps.scores, tables, form, lambda t: np.asarray(factor * t))
+    symbol = "mean log ratio" if pair.scale == "log" else "mean difference"
+    return AdditiveProblem(
+        pair, gaps.scores, tables, form, lambda t: np.asarray(factor * t), symbol
+    )
 
 
 def _interval(

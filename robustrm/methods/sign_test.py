@@ -96,7 +96,7 @@ def sign_test(
     return TestResult(
         method="sign_test",
         statistic=test.observed_statistic,
-        statistic_name="rises",
+        statistic_name=test.symbol,
         df=(),
         **found.fields(),
         n_subjects=pair.n_subjects,
@@ -129,7 +129,12 @@ def problem(
     changes = float(np.abs(signs).sum())
     form = linear(1.0, side=check_alternative(alternative))
     return AdditiveProblem(
-        pair, signs, sign_tables(signs), form, lambda line: np.asarray((line + changes) / 2)
+        pair,
+        signs,
+        sign_tables(signs),
+        form,
+        lambda line: np.asarray((line + changes) / 2),
+        "rises",
     )
 
 

@@ -146,7 +146,7 @@ def signed_rank(
     return TestResult(
         method="signed_rank",
         statistic=core.test.observed_statistic,
-        statistic_name="T⁺",
+        statistic_name=core.test.symbol,
         df=(),
         **core.null.fields(),
         n_subjects=n,
@@ -229,7 +229,7 @@ def problem(
     middle = float(np.abs(scores).sum()) / 4
     form = linear(1.0, side=check_alternative(alternative))
     return AdditiveProblem(
-        pair, scores, sign_tables(scores), form, lambda line: np.asarray(line / 4 + middle)
+        pair, scores, sign_tables(scores), form, lambda line: np.asarray(line / 4 + middle), "T⁺"
     )
 
 
@@ -327,9 +327,9 @@ def _zero_notes(core: _Core, zeros: str) -> list[Note]:
         notes.append(
             Note(
                 "unknown differences",
-                f"{core.n_unknown} of {counted(n, 'subject')} lie beyond the limit on both "
-                "occasions: their difference is unknown, not zero.",
-                "They enter as zero differences.",
+                f"{core.n_unknown} of {counted(n, 'difference')} unknown, not zero: both values "
+                "lie beyond the limit.",
+                "Entered as zero differences.",
                 "With so many, read the counts of falls and rises first." if many else "",
             )
         )
@@ -383,13 +383,16 @@ def _disagreement_note(core: _Core, estimate: Estimate, settings: _Settings) -> 
 def _substitute_notes(spread: dict[str, Any] | None, estimate: Estimate | None) -> list[Note]:
     if spread is None:
         return []
-    low_p, high_p = spread["p_value"]
-    moved = "" if estimate is None else f"{estimate.name} {span(*spread['estimate'])}, "
+    moved = "" if estimate is None else f"{estimate.name} {_range(*spread['estimate'])}, "
     return [
         Note(
             "substitutes",
             f"With substitutes from {percent(FRACTIONS[0])} of the limit to the limit: {moved}"
-            f"P {number(low_p)} to {number(high_p)}.",
+            f"P {_range(*spread['p_value'])}.",
             f"The reading {'is ' if spread['reading'] == 'unchanged' else ''}{spread['reading']}.",
         )
     ]
+
+
+def _range(low: float, high: float) -> str:
+    return number(low) if number(low) == number(high) else span(low, high)

@@ -107,7 +107,6 @@ def skillings_mack(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="skillings_mack",
-        statistic_name="T",
         df=(rank,),
         hypothesis=(
             "For each subject every order of the values over the occasions it has is equally "
@@ -131,7 +130,7 @@ def problem(table: OccasionTable) -> AdditiveProblem:
     scores = block_scores(used.order_codes())
     form = quadratic(_root_of_inverse(conditional_covariance(scores, observed)))
     tables = permutation_tables(scores, observed=observed)
-    return AdditiveProblem(used, scores, tables, form, np.asarray)
+    return AdditiveProblem(used, scores, tables, form, np.asarray, "T")
 
 
 def conditional_covariance(scores: Floats, observed: Bools) -> Floats:

@@ -12,9 +12,8 @@ from robustrm.methods.additive import (
     Rng,
     complete_rows,
     f_details,
-    f_statistic,
+    f_problem,
     omnibus_result,
-    permuted,
 )
 from robustrm.results import TestResult
 from robustrm.table import OccasionTable
@@ -95,7 +94,6 @@ def winsorized_permutation(
         found,
         NullOptions(null, draws, thresholds, rng),
         method="winsorized_permutation",
-        statistic_name="F",
         df=beside["f_df"],
         estimand="Winsorized means of the subject-centred values",
         details={**beside, "trim": trim},
@@ -111,4 +109,4 @@ def problem(
         raise ArgumentError(f"`trim` must be in [0, 0.5), got {trim!r}.{hint}")
     used = complete_rows(table, "The Winsorized permutation test")
     scores = winsorized_scores(used.substitute(substitute).centred_scores(), trim)
-    return permuted(used, scores, f_statistic(scores))
+    return f_problem(used, scores)

@@ -28,7 +28,7 @@ def drawn(table: OccasionTable):
 
 def test_the_set_is_trajectories_each_comparison_and_all_together(drawn):
     names = [picture.name for picture in drawn]
-    assert names == ["trajectories", "change-1", "change-2", "comparisons"]
+    assert names == ["trajectories", "change-1", "change-2", "comparisons", "null-distribution"]
     assert len({picture.title for picture in drawn}) == len(drawn)
 
 

@@ -166,7 +166,7 @@ def _extremes(problem: Problem, cost: Cost) -> tuple[float, ...]:
     if cost.how != "two halves":
         return (float(_law(problem).values[-1]),)
     if math.prod(problem.sizes) <= MOST_PAIRS * problem.sizes[problem.fixed]:
-        return (two_halves.largest(problem.projected()),)
+        return (two_halves.largest(*problem.halves),)
     return ()
 
 
@@ -195,7 +195,7 @@ def _upper(problem: Problem, form: Quadratic, how: How, value: float) -> Share:
     if how != "two halves":
         return _law(problem).at_least(value)
     floor = form.floor(value, problem.tables, exact=problem.exact)
-    weight, total = two_halves.upper_tail(problem.projected(), floor)
+    weight, total = two_halves.upper_tail(*problem.halves, floor)
     return Share(weight, 0, total)
 
 

@@ -172,7 +172,7 @@ def quadratic(matrix: npt.ArrayLike) -> Quadratic:
     """T = |L s|^2 for any L, (q, d); directions that L ignores are dropped."""
     rows = np.atleast_2d(np.asarray(matrix, dtype=np.float64))
     _, lengths, basis = np.linalg.svd(rows, full_matrices=False)
-    kept = lengths > 1e-12 * max(lengths[0], np.finfo(np.float64).tiny)
+    kept = lengths > 1e-12 * lengths.max(initial=np.finfo(np.float64).tiny)
     return Quadratic(read_only(lengths[kept, None] * basis[kept]), read_only(rows.T @ rows), 1)
 
 

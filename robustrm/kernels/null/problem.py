@@ -10,7 +10,8 @@ import numpy as np
 
 from robustrm.kernels.null.forms import Form, Linear, Quadratic
 from robustrm.kernels.null.symmetry import Classes, exchangeable, fold, is_one_orbit, sort_within
-from robustrm.kernels.null.tables import Array, ListedRow, PermutedRow, Table, list_all, read_only
+from robustrm.kernels.null.tables import Array, ListedRow, PermutedRow, Table, list_all
+from robustrm.kernels.null.two_halves import Half, folded_halves
 
 # The longest table an exact answer lists: 8 occasions.
 LONGEST_TABLE = 40_320
@@ -88,15 +89,13 @@ class Problem:
         savings = [size / orbit for size, orbit in zip(self.sizes, self.orbits, strict=True)]
         return int(np.argmax(savings))
 
-    def projected(self) -> tuple[ListedRow, ...]:
-        """Tables for two halves of a quadratic form: one subject folded, then all projected."""
+    @functools.cached_property
+    def halves(self) -> tuple[Half, Half]:
+        """Projected half sums of a quadratic form, the fixed subject folded."""
         assert isinstance(self.form, Quadratic)
         rows = list(self.rows)
         rows[self.fixed] = fold(rows[self.fixed], self.classes)
-        basis = self.form.projection.T
-        return tuple(
-            ListedRow(read_only(row.vectors @ basis), row.weights, row.arrangements) for row in rows
-        )
+        return folded_halves(rows, self.fixed, self.classes, self.form.projection)
 
     def aligned_sum(self) -> Array | None:
         """Sum with all rows sorted alike, where T is largest; None if sorting is no arrangement.

@@ -4,6 +4,11 @@ With A and B the possible sums of either half of the subjects, |a + b| exceeds r
 within r of -b. Such pairs are counted, with weights, by descending two k-d trees together (Gray &
 Moore 2001), without visiting them one by one.
 
+Where occasions can be relabelled, a stands for all its relabellings, because B as a whole is the
+same seen from each. One subject of its half is folded, so the list of A is k! times shorter, and
+every a is sorted, so that it fills one sector of the plane (of k!) instead of all of it thinly.
+Points that lie closer together leave the trees fewer pairs of cells to take apart.
+
 The tail is a complement, so the weights must be whole numbers with a total below 2^53: then the
 count is exact and small tails are not noise.
 
@@ -17,11 +22,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
-from robustrm.kernels.null.tables import Array, ListedRow, merge_rows
+from robustrm.kernels.null.symmetry import Classes, sort_within
+from robustrm.kernels.null.tables import Array, ListedRow, merge_rows, read_only
 
+# Half sums (N, D) and their whole weights (N,).
+Half = tuple[Array, Array]
 # Half sums nearer than this share of the largest magnitude are one: a hundredth of the tolerance.
 GRID = 1e-12
 
@@ -37,7 +46,7 @@ def split(sizes: Sequence[int]) -> tuple[list[int], list[int]]:
     return halves
 
 
-def half_sums(tables: Sequence[ListedRow], dimension: int) -> tuple[Array, Array]:
+def half_sums(tables: Sequence[ListedRow], dimension: int) -> Half:
     """List all sums of one vector from each table, (N, d), and their weights; equal ones merged."""
     grid = GRID * math.fsum(table.norm for table in tables)
     sums, weights = np.zeros((1, dimension)), np.ones(1)
@@ -48,19 +57,55 @@ def half_sums(tables: Sequence[ListedRow], dimension: int) -> tuple[Array, Array
     return sums, weights
 
 
-def halves(tables: Sequence[ListedRow], dimension: int) -> tuple[tuple[Array, Array], ...]:
+def halves(tables: Sequence[ListedRow], dimension: int) -> tuple[Half, Half]:
     """Half sums of both halves."""
-    sides = split([table.size for table in tables])
-    return tuple(half_sums([tables[i] for i in side], dimension) for side in sides)
+    one, other = split([table.size for table in tables])
+    return (
+        half_sums([tables[i] for i in one], dimension),
+        half_sums([tables[i] for i in other], dimension),
+    )
 
 
-def upper_tail(tables: Sequence[ListedRow], floor: float) -> tuple[float, int]:
-    """Weight of the arrangements with |sum|^2 above `floor`, and the weight of all.
+def folded_halves(
+    tables: Sequence[ListedRow], folded: int, classes: Classes, projection: Array
+) -> tuple[Half, Half]:
+    """Projected half sums of both halves, those with the folded subject first.
 
     Parameters
     ----------
     tables : sequence of ListedRow
-        Projected scores; one subject may have been folded (see `symmetry`).
+        Scores (arrangements, d); subject `folded` holds one vector an orbit (`symmetry.fold`).
+    folded : int
+    classes : tuple of tuple of int
+        Occasions that can be relabelled, from `symmetry.exchangeable`.
+    projection : ndarray, shape (D, d)
+
+    Returns
+    -------
+    tuple of tuple of ndarray
+        Half sums (N, D) and their weights (N,), twice.
+    """
+    sides = split([table.size for table in tables])
+    own, other = sides if folded in sides[0] else sides[::-1]
+    grid = GRID * math.fsum(tables[i].norm for i in own)
+    sums, weights = half_sums([tables[i] for i in own], projection.shape[1])
+    sums = sort_within(sums, classes) @ projection.T
+    seen = [projected(tables[i], projection) for i in other]
+    return merge_rows(sums, weights, grid=grid), half_sums(seen, len(projection))
+
+
+def projected(table: ListedRow, projection: Array) -> ListedRow:
+    """Scores as the form sees them, (arrangements, D)."""
+    return replace(table, vectors=read_only(table.vectors @ projection.T))
+
+
+def upper_tail(first: Half, second: Half, floor: float) -> tuple[float, int]:
+    """Weight of the pairs of half sums with |a + b|^2 above `floor`, and the weight of all.
+
+    Parameters
+    ----------
+    first, second : Half
+        From `folded_halves`.
     floor : float
         Bound just below the observed value; below zero everything counts.
 
@@ -70,22 +115,24 @@ def upper_tail(tables: Sequence[ListedRow], floor: float) -> tuple[float, int]:
     """
     from scipy.spatial import cKDTree  # here, because it is slow to import
 
-    total = math.prod(table.total for table in tables)
+    (sums, weights), (others, other_weights) = first, second
+    total = int(weights.sum()) * int(other_weights.sum())
     if floor < 0:
         return float(total), total
-    (first, first_weights), (second, second_weights) = halves(tables, tables[0].vectors.shape[1])
-    within = cKDTree(first).count_neighbors(
-        cKDTree(-second), math.sqrt(floor), weights=(first_weights, second_weights)
+    # a plain count is a quarter faster than a weighted one
+    is_plain = bool((weights == 1).all() and (other_weights == 1).all())
+    within = cKDTree(sums).count_neighbors(
+        cKDTree(-others), math.sqrt(floor), weights=None if is_plain else (weights, other_weights)
     )
     return float(total - within), total
 
 
-def largest(tables: Sequence[ListedRow]) -> float:
+def largest(first: Half, second: Half) -> float:
     """Largest attainable |sum|^2, by looking at every pair of half sums."""
-    (first, _), (second, _) = halves(tables, tables[0].vectors.shape[1])
-    squares = np.square(second).sum(axis=1)
+    sums, others = first[0], second[0]
+    squares = np.square(others).sum(axis=1)
     best = 0.0
-    for part in np.array_split(first, math.ceil(len(first) * len(second) / 2**20)):
-        pairs = 2 * part @ second.T + np.square(part).sum(axis=1)[:, None] + squares
+    for part in np.array_split(sums, math.ceil(len(sums) * len(others) / 2**20)):
+        pairs = 2 * part @ others.T + np.square(part).sum(axis=1)[:, None] + squares
         best = max(best, float(pairs.max()))
     return best

@@ -1,0 +1,321 @@
+"""From a plan and a table to an analysis, one function a part of it."""
+
+from __future__ import annotations
+
+import contextlib
+import dataclasses
+import importlib.metadata
+import platform
+from collections.abc import Callable, Sequence
+from typing import Any
+from zlib import crc32
+
+import numpy as np
+
+from robustrm.analysis.notes import analysis_notes
+from robustrm.analysis.result import ALL_OCCASIONS, Analysis, Inclusion, Row, Skip
+from robustrm.errors import DataError, TooFewError
+from robustrm.methods.attainable import attainable_of
+from robustrm.methods.effects import effect_sizes
+from robustrm.methods.follow_up import follow_up
+from robustrm.methods.null_distribution import NullDistribution, null_distribution
+from robustrm.methods.registry import method as registered
+from robustrm.methods.summary import summarize
+from robustrm.plan import Plan
+from robustrm.results import FollowUps, Role, TestResult, plain
+from robustrm.table import OccasionTable
+
+Progress = Callable[[int, int], None]
+
+
+ROW_FLIP_FROM = 8
+"""Below 8 subjects the smallest p of the row flip, 2^(1 − n), is too large to be of use."""
+
+
+def analyze(
+    table: OccasionTable,
+    plan: Plan | None = None,
+    *,
+    rng: np.random.Generator | int | None = None,
+    progress: Progress | None = None,
+) -> Analysis:
+    """Analyze one marker as planned, with the parametric result beside.
+
+    Parameters
+    ----------
+    table : OccasionTable
+        The data, on the raw scale.
+    plan : Plan, optional
+        What was fixed beforehand; the defaults if not given.
+    rng : Generator or int, optional
+        Root of the random streams of Monte Carlo nulls. Default: the plan's seed, else fresh
+        entropy, which is recorded.
+    progress : callable, optional
+        Called with (done, total) after each step.
+
+    Returns
+    -------
+    Analysis
+        All results with their roles; ``write_report`` makes the report.
+
+    Raises
+    ------
+    DataError
+        When the scale is logarithmic and a value is zero or negative.
+    ArgumentError
+        When the plan names an occasion that the table does not have.
+
+    Notes
+    -----
+    The scale follows the plan: a marker declared a concentration is compared as ratios, on
+    logs. Nothing in the data changes the scale or the tests. The planned contrasts are
+    computed and shown whatever the overall test says.
+
+    Examples
+    --------
+    >>> table = OccasionTable.from_array(
+    ...     [[91, 72, 60], [40, 31, 25], [120, 125, 80], [66, 50, 59], [33, 21, 20], [75, 60, 44]],
+    ...     occasions=["week 0", "week 6", "week 12"],
+    ...     marker="ferritin",
+    ...     unit="µg/L",
+    ... )
+    >>> analysis = analyze(table)
+    >>> [round(c.estimate.value, 2) for c in analysis.primary]
+    [0.78, 0.64]
+    >>> analysis.attainable.smallest_p_adjusted, analysis.attainable.reachable
+    (0.0625, False)
+    """
+    settled = plan if plan is not None else Plan()
+    root = _root(settled, rng)
+    raw = table.in_natural_order()
+    scaled = raw.on_scale(settled.used_scale)
+    steps = _Steps(progress, total=8)
+
+    primary = _primary(scaled, settled, root)
+    steps.done()
+    omnibus, skipped = _omnibus(scaled, settled, root)
+    steps.done()
+    companions = _companions(scaled, settled, root)
+    steps.done()
+    null = _null_distribution(scaled, settled, omnibus, root)
+    steps.done()
+    beside, skipped_beside = _beside(raw, settled)
+    steps.done()
+    effects = effect_sizes(scaled, primary, omnibus)
+    steps.done()
+    summary = summarize(raw, substitute=settled.substitute)
+    steps.done()
+    analysis = Analysis(
+        plan=settled,
+        table=raw,
+        scale=settled.used_scale,
+        attainable=attainable_of(primary),
+        primary=primary,
+        omnibus=omnibus,
+        supplementary=companions,
+        beside=beside,
+        null_distribution=null,
+        effects=effects,
+        summary=summary,
+        inclusions=(),
+        skips=(*skipped, *skipped_beside),
+        ledger=scaled.ledger,
+        notes=analysis_notes(raw, settled, summary),
+        record=_record(raw, settled, root),
+    )
+    steps.done()
+    return dataclasses.replace(analysis, inclusions=_inclusions(analysis))
+
+
+class _Steps:
+    """Counts finished steps for a progress callback."""
+
+    def __init__(self, progress: Progress | None, total: int) -> None:
+        self.progress, self.total, self.count = progress, total, 0
+
+    def done(self) -> None:
+        self.count += 1
+        if self.progress is not None:
+            self.progress(self.count, self.total)
+
+
+def _root(plan: Plan, rng: np.random.Generator | int | None) -> int:
+    """Return the 128-bit root of all streams, in the documented order of precedence."""
+    if isinstance(rng, np.random.Generator):
+        high, low = rng.integers(2**63, size=2).tolist()
+        return int(high) << 64 | int(low)
+    if rng is not None:
+        return int(rng)
+    if plan.seed is not None:
+        return plan.seed
+    entropy = np.random.SeedSequence().entropy
+    return entropy if isinstance(entropy, int) else 0
+
+
+def stream(root: int, name: str, block: int = 0) -> np.random.SeedSequence:
+    """Return the random stream of one method: adding a method never changes another's."""
+    return np.random.SeedSequence(root, spawn_key=(crc32(name.encode()), block))
+
+
+def _primary(table: OccasionTable, plan: Plan, root: int) -> FollowUps:
+    closed = plan.adjust == "closed"
+    options = _offered(plan, "sign_flip" if closed else plan.pair, _thresholds(table, plan), root)
+    family = follow_up(
+        table,
+        method=plan.pair,
+        family=plan.contrasts,
+        adjust=plan.adjust,
+        intervals=plan.intervals,
+        level=plan.level,
+        rng=stream(root, plan.pair),
+        options={k: v for k, v in options.items() if k not in ("level", "rng")},
+    )
+    if all(comparison.result.n_subjects == 0 for comparison in family):
+        raise TooFewError(
+            "No planned comparison has a subject with both of its occasions. Check the ids and "
+            "the occasions of the file."
+        )
+    return family
+
+
+def _thresholds(table: OccasionTable, plan: Plan) -> tuple[float, ...]:
+    """Return the levels that a p value of the family is compared with, step-down ones too."""
+    k = table.n_occasions
+    sizes = {"first": k - 1, "successive": k - 1, "all": k * (k - 1) // 2}
+    m = sizes[plan.contrasts] if isinstance(plan.contrasts, str) else len(plan.contrasts)
+    alpha = 1 - plan.level
+    return tuple(alpha / i for i in range(1, m + 1))
+
+
+def _offered(plan: Plan, name: str, thresholds: Sequence[float], root: int) -> dict[str, Any]:
+    """Return what the plan says of the options that a method takes."""
+    offered = {
+        "alternative": plan.alternative,
+        "zeros": plan.zeros,
+        "substitute": plan.substitute,
+        "level": plan.level,
+        "draws": plan.stages,
+        "thresholds": thresholds,
+        "rng": stream(root, name),
+    }
+    return {key: value for key, value in offered.items() if key in registered(name).options}
+
+
+def _omnibus(
+    table: OccasionTable, plan: Plan, root: int
+) -> tuple[TestResult | None, tuple[Skip, ...]]:
+    entry = registered(plan.omnibus)
+    try:
+        return _overall(table, plan, plan.omnibus, root), ()
+    except TooFewError as error:
+        return None, (Skip(f"{entry.title} ({table.scale} scale)", str(error)),)
+
+
+def _overall(table: OccasionTable, plan: Plan, name: str, root: int) -> TestResult:
+    options = _offered(plan, name, (1 - plan.level,), root)
+    return registered(name).load()(table, **options)
+
+
+def _companions(table: OccasionTable, plan: Plan, root: int) -> tuple[Row, ...]:
+    """Return what stands beside the overall test, and the directions of the contrasts.
+
+    The row flip does not ask for exchangeable occasions, which occasions in time rarely are;
+    the Skillings-Mack test takes the subjects who lack an occasion.
+    """
+    names = []
+    if plan.in_time and table.complete().n_subjects >= ROW_FLIP_FROM and plan.omnibus != "row_flip":
+        names.append("row_flip")
+    if table.missing.any() and plan.omnibus != "skillings_mack":
+        names.append("skillings_mack")
+    rows = []
+    for name in names:
+        with contextlib.suppress(TooFewError):  # too few for a companion is no news
+            rows.append(Row("supporting", ALL_OCCASIONS, _overall(table, plan, name, root)))
+    return (*rows, *_directions(table, plan, root))
+
+
+def _directions(table: OccasionTable, plan: Plan, root: int) -> list[Row]:
+    if plan.pair == "sign_test":
+        return []
+    family = follow_up(
+        table,
+        method="sign_test",
+        family=plan.contrasts,
+        adjust="holm",
+        intervals=plan.intervals,
+        level=plan.level,
+        rng=stream(root, "sign_test"),
+        options={"alternative": plan.alternative},
+    )
+    return [Row("supplementary", c.label, c.result, c.p_adjusted, family.adjust) for c in family]
+
+
+def _null_distribution(
+    table: OccasionTable, plan: Plan, omnibus: TestResult | None, root: int
+) -> NullDistribution | None:
+    if omnibus is None or not registered(plan.omnibus).is_additive:
+        return None
+    options = {"substitute": plan.substitute}
+    taken = {k: v for k, v in options.items() if k in registered(plan.omnibus).options}
+    return null_distribution(table, plan.omnibus, rng=stream(root, "null distribution"), **taken)
+
+
+def _beside(raw: OccasionTable, plan: Plan) -> tuple[tuple[Row, ...], tuple[Skip, ...]]:
+    rows: list[Row] = []
+    skips: list[Skip] = []
+    for scale in ("raw", "log"):
+        role: Role = "sensitivity" if scale == plan.used_scale else "supplementary"
+        try:
+            table = raw.on_scale(scale)
+            rows.append(_parametric_omnibus(table, role, plan))
+            rows.extend(_parametric_pairs(table, role, plan))
+        except (TooFewError, DataError) as error:
+            reason = error.problems[0].message if isinstance(error, DataError) else str(error)
+            skips.append(Skip(f"parametric results ({scale} scale)", reason))
+    return tuple(rows), tuple(skips)
+
+
+def _parametric_omnibus(table: OccasionTable, role: Role, plan: Plan) -> Row:
+    return Row(role, ALL_OCCASIONS, registered("anova").load()(table, substitute=plan.substitute))
+
+
+def _parametric_pairs(table: OccasionTable, role: Role, plan: Plan) -> list[Row]:
+    family = follow_up(
+        table,
+        method="paired_t",
+        family=plan.contrasts,
+        adjust="bonferroni",
+        intervals=plan.intervals,
+        level=plan.level,
+        options={"alternative": plan.alternative, "substitute": plan.substitute},
+    )
+    return [Row(role, c.label, c.result, c.p_adjusted, family.adjust) for c in family]
+
+
+def _inclusions(analysis: Analysis) -> tuple[Inclusion, ...]:
+    """Return the status of every subject in every analysis; included ones add up to its n."""
+    table = analysis.table
+    result: list[Inclusion] = []
+    for row in analysis.rows():
+        name = f"{registered(row.result.method).title}, {row.result.scale} scale: {row.label}"
+        used = set(row.result.subjects)
+        result.extend(
+            Inclusion(name, subject, subject in used, "" if subject in used else table.reason(i))
+            for i, subject in enumerate(table.subjects)
+        )
+    return tuple(result)
+
+
+def _record(table: OccasionTable, plan: Plan, root: int) -> dict[str, Any]:
+    versions = {name: importlib.metadata.version(name) for name in ("numpy", "scipy", "pandas")}
+    return {
+        "source": plain(dict(table.source)),
+        "plan_digest": plan.digest,
+        "seed": str(root),
+        "versions": {
+            "robustrm": importlib.metadata.version("robustrm"),
+            "python": platform.python_version(),
+            **versions,
+        },
+        "platform": platform.platform(),
+    }

@@ -1,0 +1,272 @@
+"""The commands."""
+
+from __future__ import annotations
+
+import inspect
+import io
+import json
+import shlex
+import sys
+import textwrap
+import typing
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
+from typing import Any
+
+import click
+
+import robustrm
+from robustrm._checks import did_you_mean
+from robustrm._format import Style
+from robustrm.analysis import Analysis, Progress
+from robustrm.cli.exits import REFUSED, Group, debug_option
+from robustrm.cli.options import (
+    PLAN_OPTIONS,
+    data_argument,
+    plan_file_option,
+    plan_of,
+    reading_options,
+    table_of,
+    together,
+)
+from robustrm.errors import ArgumentError, DataError
+from robustrm.methods.registry import METHODS, Method
+from robustrm.report.structure import problems_text, structure, structure_text
+
+_WORDS = "robustrm.words"
+
+
+class Recorded(click.Command):
+    """A command that keeps its words as typed, so that the next command can repeat them."""
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        """Keep the words, and parse them."""
+        ctx.meta[_WORDS] = [word for word in args if word not in ("--json", "--debug")]
+        return super().parse_args(ctx, args)
+
+
+def _examples(text: str) -> str:
+    """Return the last paragraph of a help page, its lines kept as they are."""
+    lines = textwrap.indent(inspect.cleandoc(text), "  ")
+    return f"\b\nExample:\n{lines}"
+
+
+json_option = click.option("--json", "as_json", is_flag=True, help="Print JSON instead of text.")
+
+
+def _echo_json(content: Mapping[str, Any]) -> None:
+    click.echo(json.dumps(content, allow_nan=False, ensure_ascii=False, indent=2))
+
+
+@click.group(
+    cls=Group,
+    context_settings={"help_option_names": ["-h", "--help"]},
+    epilog=_examples(
+        """
+        robustrm demo demo
+        robustrm check demo/calprotectin.csv --subject patient \\
+            --occasions "week 0,week 2,week 6,week 12"
+        """
+    ),
+)
+@click.version_option(robustrm.__version__, prog_name="robustrm")
+@debug_option
+def main() -> None:
+    """Say whether a marker changed within the same people, by how much and how surely.
+
+    For one skewed biomarker measured on three or more occasions in the same subjects, with
+    values under a detection limit and missed visits. Statistics for research: not a
+    diagnosis and not a medical device.
+
+    DATA is a csv, tsv or xlsx file, or - for standard input. Exit codes: 0 done, 2 usage or
+    a refused plan, 3 data refused with every problem listed, 130 interrupted, 1 anything
+    else.
+    """
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
+
+
+@main.command(
+    cls=Recorded,
+    short_help="Show what is understood of a file, or what is in the way.",
+    epilog=_examples(
+        """
+        robustrm check crp.csv --subject id --occasions "week 0,week 6,week 12"
+        robustrm check crp.csv --subject id --occasion week --value crp \\
+            --order 0,6,12
+        """
+    ),
+)
+@data_argument
+@reading_options
+@together(plan_file_option, PLAN_OPTIONS["scale"], PLAN_OPTIONS["marker_kind"])
+@json_option
+@debug_option
+@click.pass_context
+def check(
+    ctx: click.Context, /, data: str, plan_file: str | None, as_json: bool, **options: Any
+) -> None:
+    """Read DATA and show what was understood; nothing is computed.
+
+    Shows who has what on which occasion, what was noticed, what was done to the cells, and
+    the command that analyzes the data. If something stands in the way, every problem is
+    listed with what to do, and the exit code is 3.
+    """
+    plan = plan_of(plan_file, options)
+    try:
+        table = table_of(data, options)
+        table.on_scale(plan.used_scale)
+    except DataError as error:
+        if as_json:
+            _echo_json({"problems": [problem.to_dict() for problem in error.problems]})
+        else:
+            click.echo(problems_text(error))
+        ctx.exit(REFUSED)
+    analyze_line = shlex.join(["robustrm", "analyze", *ctx.meta[_WORDS], "--out", "report"])
+    found = structure(table)
+    if as_json:
+        _echo_json({**found, "problems": [], "analyze": analyze_line})
+    else:
+        click.echo(f"{structure_text(found)}\n\nNothing stands in the way. To analyze:\n")
+        click.echo(analyze_line)
+
+
+@main.command(
+    short_help="Analyze one marker as planned and write the report.",
+    epilog=_examples(
+        """
+        robustrm analyze crp.csv --subject id --occasions "week 0,week 6,week 12" \\
+            --marker CRP --unit mg/L --lower-limit 0.3 --out report
+        """
+    ),
+)
+@data_argument
+@reading_options
+@together(plan_file_option, *PLAN_OPTIONS.values())
+@click.option(
+    "--out",
+    type=click.Path(file_okay=False),
+    metavar="FOLDER",
+    help="Write the report here: HTML, JSON, tables, figures, methods text and plan.",
+)
+@click.option(
+    "--style",
+    type=click.Choice(typing.get_args(Style)),
+    default="medical",
+    help="How p values are printed: P = 0.013 (medical) or p = .013 (apa).",
+)
+@json_option
+@click.option("--quiet", is_flag=True, help="No progress and no notes on stderr.")
+@debug_option
+def analyze(
+    data: str,
+    plan_file: str | None,
+    out: str | None,
+    style: Style,
+    as_json: bool,
+    quiet: bool,
+    **options: Any,
+) -> None:
+    """Analyze one marker of DATA as planned, with the parametric result beside.
+
+    Prints estimates with intervals, p values and who is in which analysis; with --out it
+    also writes the whole report. Options of the plan hold for this call, and the plan that
+    was used is part of the report.
+    """
+    plan = plan_of(plan_file, options)
+    table = table_of(data, options)
+    with _progress(quiet) as progress:
+        analysis = robustrm.analyze(table, plan, progress=progress)
+    if out is not None:
+        from robustrm.report.folder import write_report
+
+        folder = write_report(analysis, out, style=style)
+        if not quiet:
+            click.echo(f"Report: {folder / 'report.html'}", err=True)
+    click.echo(_result_text(analysis, style, as_json=as_json), nl=False)
+
+
+def _result_text(analysis: Analysis, style: Style, *, as_json: bool) -> str:
+    from robustrm.report.json_text import json_text
+    from robustrm.report.text import text
+
+    document = analysis.to_dict()
+    return json_text(document) if as_json else text(document, style=style)
+
+
+@contextmanager
+def _progress(quiet: bool) -> Iterator[Progress | None]:
+    """Give a callable that draws a bar on stderr, where somebody is looking."""
+    if quiet or not sys.stderr.isatty():
+        yield None
+        return
+    with click.progressbar(length=1, label="analyzing", file=sys.stderr) as bar:
+
+        def show(done: int, total: int) -> None:
+            bar.length = total
+            bar.update(done - bar.pos)
+
+        yield show
+
+
+@main.command(
+    short_help="Write invented data to try it on.", epilog=_examples("robustrm demo demo")
+)
+@click.argument("folder", type=click.Path(file_okay=False), default=".")
+@debug_option
+def demo(folder: str) -> None:
+    """Write an invented data set into FOLDER and print the command that analyzes it."""
+    from robustrm.demo import DEMO_OPTIONS, write_demo
+
+    target = write_demo(folder)
+    click.echo(f"Wrote {target}: invented data, nobody was measured. To analyze them:", err=True)
+    report = str(target.parent / "report")
+    click.echo(shlex.join(["robustrm", "analyze", str(target), *DEMO_OPTIONS, "--out", report]))
+
+
+@main.command(
+    short_help="List the methods, or explain one.",
+    epilog=_examples("robustrm methods\nrobustrm methods friedman"),
+)
+@click.argument("name", required=False)
+@debug_option
+def methods(name: str | None) -> None:
+    """List the methods with the question each answers, or explain the one called NAME."""
+    if name is None:
+        click.echo("\n\n".join(_kind_text(kind, title) for kind, title in _KINDS.items()))
+        return
+    entries = {method.name: method for method in METHODS}
+    if name not in entries:
+        raise ArgumentError(
+            f"`NAME` must be one of {', '.join(entries)}, got {name!r}."
+            f"{did_you_mean(name, entries)}"
+        )
+    entry, function = entries[name], entries[name].load()
+    click.echo(f"{entry.title}\n{entry.question}\n")
+    click.echo(f"robustrm.{name}{_plain_signature(function)}\n\n{inspect.getdoc(function)}")
+
+
+def _plain_signature(function: Callable[..., Any]) -> inspect.Signature:
+    """Return the signature without types, which the text below it tells in words."""
+    signature = inspect.signature(function)
+    bare = [p.replace(annotation=p.empty) for p in signature.parameters.values()]
+    return signature.replace(parameters=bare, return_annotation=signature.empty)
+
+
+_KINDS = {"omnibus": "All occasions at once", "pair": "Two occasions"}
+
+
+def _kind_text(kind: str, title: str) -> str:
+    entries = [method for method in METHODS if method.kind == kind]
+    width = max(len(method.name) for method in entries)
+    return "\n\n".join([title, *(_entry_text(method, width) for method in entries)])
+
+
+def _entry_text(method: Method, width: int) -> str:
+    null = "each subject's occasions are exchangeable"
+    if not method.exchangeable:
+        null = f"see robustrm methods {method.name}"
+    said = f"{method.question} Null hypothesis: {null}."
+    lines = textwrap.wrap(said, 74, break_on_hyphens=False)
+    return "\n      ".join([f"  {method.name.ljust(width)}  {method.title}", *lines])

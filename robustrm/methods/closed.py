@@ -1,0 +1,264 @@
+"""Closed permutation testing of pairs of occasions.
+
+H_ab says that swapping a subject's values at a and b changes nothing, given the others. An
+intersection of such hypotheses is a set partition of the occasions: within each block all
+orders are equally likely. A pair is rejected when every partition that joins it is.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+from zlib import crc32
+
+import numpy as np
+
+from robustrm._checks import check_choice
+from robustrm._format import listing
+from robustrm.errors import ArgumentError
+from robustrm.kernels.null.engine import smallest_tail, tail
+from robustrm.kernels.null.forms import centring
+from robustrm.kernels.null.results import Tail
+from robustrm.kernels.null.tables import permutation_tables
+from robustrm.kernels.null.work import BUDGET
+from robustrm.kernels.scores import aligned_scores
+from robustrm.methods.registry import CLOSED_METHODS
+from robustrm.methods.sign_flip import sign_flip
+from robustrm.results import Comparison, Note
+from robustrm.table import OccasionTable
+from robustrm.ties import Floats
+
+MOST_OCCASIONS = 6
+Partition = tuple[tuple[int, ...], ...]
+Places = tuple[int, int]
+
+
+@dataclass(frozen=True, slots=True)
+class ClosedTest:
+    """What closed testing says of one pair.
+
+    Parameters
+    ----------
+    raw : Tail
+        The pair alone: its own values swapped.
+    p_adjusted : float
+        The largest p value over the partitions that join the pair.
+    partition : str
+        The partition that gave it.
+    deciding : Tail
+        How that p value was found.
+    smallest : float
+        The smallest adjusted p value that any arrangement of these scores could give.
+    """
+
+    raw: Tail
+    p_adjusted: float
+    partition: str
+    deciding: Tail
+    smallest: float
+
+
+def partitions_of(pairs: Sequence[Places], k: int) -> list[Partition]:
+    """Return the partitions that are intersections of the pairs' hypotheses.
+
+    Each joins some of the pairs; with all pairs of k occasions these are all set partitions
+    but the one without a joined pair.
+
+    Examples
+    --------
+    >>> partitions_of([(0, 1), (0, 2)], 3)
+    [((0, 1), (2,)), ((0, 1, 2),), ((0, 2), (1,))]
+    """
+    alone: Partition = tuple((j,) for j in range(k))
+    found = {alone}
+    for pair in pairs:
+        found |= {_joined(partition, pair) for partition in found}
+    return sorted(found - {alone})
+
+
+def _joined(partition: Partition, pair: Places) -> Partition:
+    merged = [block for block in partition if set(block) & set(pair)]
+    others = [block for block in partition if not set(block) & set(pair)]
+    return tuple(sorted([*others, tuple(sorted(place for block in merged for place in block))]))
+
+
+def joins(partition: Partition, pair: Places) -> bool:
+    """Whether one block of the partition holds both occasions."""
+    return any(set(pair) <= set(block) for block in partition)
+
+
+def closed_tests(
+    scores: Floats,
+    pairs: Sequence[Places],
+    labels: Sequence[str],
+    *,
+    stages: Sequence[int],
+    thresholds: Sequence[float],
+    root: np.random.SeedSequence,
+) -> list[ClosedTest]:
+    """Test every partition of the family and give each pair its largest p value.
+
+    Parameters
+    ----------
+    scores : array (n, k)
+        Row-centred scores of complete rows, computed once from the whole table.
+    pairs : sequence of (int, int)
+        The declared family, as places in `labels`.
+    labels : sequence of str
+        Occasions.
+    stages, thresholds
+        Monte Carlo draws, and the levels that a p value is compared with.
+    root : SeedSequence
+        Every partition draws from a stream of its own.
+
+    Returns
+    -------
+    list of ClosedTest
+        One a pair, in order.
+    """
+    partitions = partitions_of(pairs, len(labels))
+    tails = {
+        partition: tail(
+            permutation_tables(scores, blocks=partition),
+            scores.sum(axis=0),
+            centring(len(labels), blocks=partition),
+            budget=BUDGET / len(partitions),
+            stages=stages,
+            thresholds=thresholds,
+            rng=_stream(root, partition),
+        )
+        for partition in partitions
+    }
+    smallest = smallest_closed(scores, pairs)
+    return [
+        _closed_test(pair, tails, least, labels)
+        for pair, least in zip(pairs, smallest, strict=True)
+    ]
+
+
+def _closed_test(
+    pair: Places,
+    tails: dict[Partition, Tail],
+    smallest: float,
+    labels: Sequence[str],
+) -> ClosedTest:
+    joining = [partition for partition in tails if joins(partition, pair)]
+    alone = _joined(tuple((j,) for j in range(len(labels))), pair)
+    worst = max(joining, key=lambda partition: tails[partition].p_value)
+    return ClosedTest(
+        raw=tails[alone],
+        p_adjusted=tails[worst].p_value,
+        partition=written(worst, labels),
+        deciding=tails[worst],
+        smallest=smallest,
+    )
+
+
+def closed_scores(used: OccasionTable) -> dict[str, Floats]:
+    """Return the scores of each method of closed testing, from the whole table."""
+    values = used.centred_scores()
+    return {"sign_flip": values, "aligned_ranks": aligned_scores(values)}
+
+
+def smallest_closed(scores: Floats, pairs: Sequence[Places]) -> list[float]:
+    """Return the smallest adjusted p value of each pair that any outcome could give."""
+    partitions = partitions_of(pairs, scores.shape[1])
+    smallest = {partition: _smallest(scores, partition) for partition in partitions}
+    return [max(p for block, p in smallest.items() if joins(block, pair)) for pair in pairs]
+
+
+def _smallest(scores: Floats, partition: Partition) -> float:
+    # at the most favourable outcome every subject's scores are in the same order, so all
+    # partitions are at their smallest together
+    found = smallest_tail(
+        permutation_tables(np.sort(scores, axis=1), blocks=partition),
+        centring(scores.shape[1], blocks=partition),
+    )
+    return 0.0 if found is None else found.p_value
+
+
+def _stream(root: np.random.SeedSequence, partition: Partition) -> np.random.Generator:
+    key = crc32(repr(partition).encode())
+    seed = np.random.SeedSequence(root.entropy, spawn_key=(*root.spawn_key, key))
+    return np.random.default_rng(seed)
+
+
+def written(partition: Partition, labels: Sequence[str]) -> str:
+    """Return the joined blocks in words: ``"week 0 with week 2; week 6 with week 12"``."""
+    blocks = [block for block in partition if len(block) > 1]
+    return "; ".join(listing([labels[j] for j in block]) for block in blocks)
+
+
+def closed_comparison(
+    used: OccasionTable,
+    pair: tuple[str, str],
+    method: str,
+    test: ClosedTest,
+    p_holm: float,
+    *,
+    level: float,
+) -> Comparison:
+    """Make the row of one pair: the sign flip of its values, with the closed p value.
+
+    With aligned ranks the p values are those of the rank scores; estimate and interval stay
+    those of the sign flip, which a note says.
+    """
+    result = sign_flip(used, *pair, level=level)
+    result = replace(
+        result,
+        method=method,
+        p_value=test.raw.p_value,
+        null=test.raw.null,
+        p_interval=test.raw.p_interval,
+        draws=test.raw.draws,
+        hypothesis=(
+            "Swapping a subject's values at the two occasions changes nothing, given the others."
+        ),
+        notes=(*result.notes, *((_INTERVAL_OF_VALUES,) if method == "aligned_ranks" else ())),
+        details={
+            **result.details,
+            "p_holm": p_holm,
+            "partition": test.partition,
+            "partition_null": test.deciding.null,
+            "partition_p_interval": test.deciding.p_interval,
+        },
+    )
+    return Comparison(*pair, result, test.p_adjusted)
+
+
+_INTERVAL_OF_VALUES = Note(
+    "interval of the values",
+    "P is that of the aligned ranks; estimate and interval are those of the sign flip of the "
+    "values.",
+    "They need not agree at the level.",
+)
+
+
+def check_closed(method: str, k: int, settings: Mapping[str, Any]) -> None:
+    """Refuse a method, direction or number of occasions that closed testing does not take.
+
+    Raises
+    ------
+    ArgumentError
+        With what it takes.
+    """
+    if method not in CLOSED_METHODS:
+        named = " or ".join(repr(name) for name in CLOSED_METHODS)
+        raise ArgumentError(
+            f"`method` must be {named} with adjust='closed', got {method!r}: the scores are "
+            "computed once from the whole table."
+        )
+    if k > MOST_OCCASIONS:
+        raise ArgumentError(
+            f"`adjust` 'closed' takes at most {MOST_OCCASIONS} occasions, got {k}. Use 'holm', "
+            "or select occasions."
+        )
+    if settings.get("alternative", "two-sided") != "two-sided":
+        raise ArgumentError(
+            "`alternative` must be 'two-sided' with adjust='closed', got "
+            f"{settings['alternative']!r}: a partition has no direction."
+        )
+    known = ("alternative", "substitute", "level", "null", "draws", "thresholds")
+    for name in settings:
+        check_choice("options with adjust='closed'", name, known)

@@ -1,0 +1,207 @@
+"""Methods and Results in the words of a paper; every number is taken from the document.
+
+Drafts for the authors to check: what the analysis did and found, in the usual order. No
+sentence can say more than a within-subject comparison shows. ``style="medical"`` writes
+``P = 0.013``; ``style="apa"`` writes ``p = .013`` and drops the leading zero of every
+quantity that cannot exceed 1.
+"""
+
+from __future__ import annotations
+
+from robustrm._format import (
+    Style,
+    counted,
+    level_text,
+    listing,
+    percent,
+    restyled,
+)
+from robustrm.methods.registry import method as registered
+from robustrm.report.document import Document
+from robustrm.report.results_text import results_paragraph
+from robustrm.report.sentences import (
+    FAMILIES,
+    adjustment,
+    all_rows,
+    in_sentence,
+    is_exploratory,
+    marker,
+    planned_rows,
+)
+
+SUBSTITUTES = {
+    "half": "half the limit",
+    "root2": "the limit divided by √2",
+    "limit": "the limit itself",
+}
+ZEROS = {
+    "pratt": "zero differences ranked and then left out, after Pratt",
+    "drop": "zero differences left out before ranking, after Wilcoxon",
+}
+
+
+def methods_text(document: Document, style: Style = "medical") -> str:
+    """Return both paragraphs under their headings, one line a paragraph, for pasting."""
+    return (
+        f"Methods\n\n{methods_paragraph(document, style)}\n\n"
+        f"Results\n\n{results_paragraph(document, style)}\n"
+    )
+
+
+def methods_paragraph(document: Document, style: Style = "medical") -> str:
+    """Return what was done, in the order of a statistical-methods section."""
+    parts = [
+        _measured(document),
+        _scale(document),
+        _contrasts(document),
+        _null_distributions(document),
+        _adjusted(document),
+        _estimates(document),
+        _overall_method(document),
+        _beside_method(document),
+        _limits_rule(document),
+        _missing_rule(document),
+        "The analysis removed no value as an outlier.",
+        restyled(document["attainable"]["sentence"], style),
+        _exploratory_rule(document),
+        _software(document),
+    ]
+    return " ".join(part for part in parts if part)
+
+
+def _measured(document: Document) -> str:
+    study = document["study"]
+    occasions = listing(study["occasions"], 12)
+    return (
+        f"{marker(document)} was measured in the same subjects on {study['n_occasions']} "
+        f"occasions ({occasions})."
+    )
+
+
+def _scale(document: Document) -> str:
+    if document["study"]["scale"] == "log":
+        return "Values were compared as ratios, on the log scale."
+    return "Values were compared as differences, on the raw scale."
+
+
+def _contrasts(document: Document) -> str:
+    plan, family = document["plan"], document["primary"]
+    title = in_sentence(registered(plan["pair"]).title)
+    sides = "two-sided" if plan["sides"] == 2 else "one-sided"
+    rule = f", {ZEROS[plan['zeros']]}" if plan["pair"] == "signed_rank" else ""
+    comparisons = counted(len(family["comparisons"]), "comparison")
+    towards = "" if plan["sides"] == 2 else f" towards {_towards(plan['direction'])} values"
+    return (
+        f"The planned primary analysis compared {FAMILIES[family['family']]} ({comparisons}) "
+        f"by the {title} ({sides}{towards}{rule})."
+    )
+
+
+def _towards(direction: str) -> str:
+    return "larger" if direction == "greater" else "smaller"
+
+
+def _null_distributions(document: Document) -> str:
+    used = {row["result"]["null"] for row in planned_rows(document)}
+    parts = []
+    if "exact" in used:
+        parts.append("exact, given the observed ties and zeros")
+    if "monte carlo" in used:
+        draws = max(row["result"]["draws"] or 0 for row in planned_rows(document))
+        parts.append(f"from up to {draws} random arrangements where an exact one is too costly")
+    return f"Null distributions are {listing(parts)}." if parts else ""
+
+
+def _adjusted(document: Document) -> str:
+    family = document["primary"]
+    name = adjustment(family)
+    level = percent(1 - family["level"])
+    if name is None:
+        return f"The level of the tests was {level}."
+    m = len(family["comparisons"])
+    return (
+        f"P values were adjusted over the {m} comparisons by the {name} method, at level {level}."
+    )
+
+
+def _estimates(document: Document) -> str:
+    family = document["primary"]
+    names = {c["result"]["estimate"]["name"]: c["result"]["estimate"]["kind"]
+             for c in family["comparisons"] if c["result"]["estimate"]}  # fmt: skip
+    if not names:
+        return ""
+    (name, kind), *_ = names.items()
+    level = level_text(family["level"])
+    if family["intervals"] == "simultaneous":
+        return f"Each {name} has {_article(kind)} interval; together they hold at least {level}."
+    unadjusted = " and are not adjusted for their number" if len(family["comparisons"]) > 1 else ""
+    least = "at least " if kind == "exact" else ""
+    return f"Estimates are {name}s with {kind} intervals that hold {least}{level} each{unadjusted}."
+
+
+def _article(kind: str) -> str:
+    return f"an {kind}" if kind[:1] in "aeiou" else f"a {kind}"
+
+
+def _overall_method(document: Document) -> str:
+    row = document["omnibus"]
+    if row is None:
+        return ""
+    return (
+        f"The {in_sentence(row['title'])} over all occasions supports the planned comparisons, "
+        f"which are reported whatever it says. Its null hypothesis: "
+        f"{_uncapped(row['result']['hypothesis'])}"
+    )
+
+
+def _beside_method(document: Document) -> str:
+    roles = {row["role"]: row["result"]["scale"] for row in document["beside"]}
+    if not roles:
+        return ""
+    told = {
+        "sensitivity": "as sensitivity analyses, which assume normal residuals",
+        "supplementary": "as supplementary analyses, which have another estimand",
+    }
+    scales = [f"on the {roles[role]} scale {told[role]}" for role in told if role in roles]
+    return (
+        "Within-subject analysis of variance (Greenhouse-Geisser correction) and paired t tests "
+        f"(Bonferroni) stand beside, {listing(scales)}."
+    )
+
+
+def _limits_rule(document: Document) -> str:
+    if not any(s["n_below"] + s["n_above"] for s in document["summary"]):
+        return ""
+    rule = SUBSTITUTES[document["plan"]["substitute"]]
+    return (
+        "Values beyond a limit were ranked beyond all measured ones; where a size was needed, "
+        f"{rule} entered for a value below it, and estimates were repeated with other substitutes."
+    )
+
+
+def _missing_rule(document: Document) -> str:
+    if document["study"]["n_complete"] == document["study"]["n_subjects"]:
+        return ""
+    return (
+        "Each comparison uses all subjects with both occasions, overall tests those with every "
+        "occasion; no value was filled in."
+    )
+
+
+def _exploratory_rule(document: Document) -> str:
+    if not is_exploratory(document):
+        return ""
+    return "The study is exploratory: estimates and intervals come first, P values are exploratory."
+
+
+def _software(document: Document) -> str:
+    versions = dict(document["record"].get("versions", {}))
+    own = f"robustrm {versions.pop('robustrm', '')}".strip()
+    others = f" ({', '.join(f'{name} {v}' for name, v in versions.items())})" if versions else ""
+    drawn = any(row["result"]["null"] == "monte carlo" for row in all_rows(document))
+    seed = f", random seed {document['record']['seed']}" if drawn else ""
+    return f"Computed with {own}{others}{seed}."
+
+
+def _uncapped(sentence: str) -> str:
+    return f"{sentence[:1].lower()}{sentence[1:]}"
