@@ -8,24 +8,39 @@ from __future__ import annotations
 
 import html
 import math
-import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, fields, replace
 from fractions import Fraction
-from types import MappingProxyType
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from robustrm import ties
-from robustrm._checks import check_choice, check_member, check_names
+from robustrm._checks import check_member, check_names
 from robustrm._format import counted, listing, number
 from robustrm.cells import clean
-from robustrm.errors import ArgumentError, DataError, Problem
+from robustrm.errors import ArgumentError, DataError
 from robustrm.ledger import CellCounts, Ledger, LedgerLine
 from robustrm.records import Declared, Findings, Written, arrange_written, sheets
 from robustrm.results import Note, Scale
+from robustrm.table.arrays import (
+    ARRAYS,
+    cell_flags,
+    cell_limits,
+    check_consistent,
+    default_ids,
+    reporting_step,
+    same,
+)
+from robustrm.table.limits import (
+    at_common_limit,
+    log_limits,
+    not_positive,
+    substitute_factor,
+    substituted_units,
+)
+from robustrm.table.natural import natural_key
 from robustrm.ties import Bools, Differences, Floats
 
 if TYPE_CHECKING:
@@ -37,23 +52,8 @@ if TYPE_CHECKING:
     from robustrm.records.replicates import How
     from robustrm.records.sheets import Sheet
 
-SUBSTITUTES: Mapping[str, float | Fraction] = MappingProxyType(
-    {"half": Fraction(1, 2), "root2": 1 / math.sqrt(2), "limit": Fraction(1)}
-)
 Cells = NDArray[np.str_]
 _Places = tuple[NDArray[np.int64], NDArray[np.int64]]
-
-
-def natural_key(text: str) -> tuple[tuple[int, int | str], ...]:
-    """Return a sort key that puts ``"week 2"`` before ``"week 10"``.
-
-    Examples
-    --------
-    >>> sorted(["T10", "T2", "T1"], key=natural_key)
-    ['T1', 'T2', 'T10']
-    """
-    parts = re.split(r"(\d+)", text)
-    return tuple((0, int(part)) if part.isdecimal() else (1, part.casefold()) for part in parts)
 
 
 def _frozen(array: ArrayLike, dtype: Any) -> NDArray[Any]:
@@ -142,12 +142,12 @@ class OccasionTable:
     ledger: Ledger = field(default_factory=Ledger)
 
     def __post_init__(self) -> None:
-        for name, dtype in _ARRAYS.items():
+        for name, dtype in ARRAYS.items():
             array = getattr(self, name)
             if array is not None:
                 object.__setattr__(self, name, _frozen(array, dtype))
         object.__setattr__(self, "source", dict(self.source))
-        _check_consistent(self)
+        check_consistent(self)
 
     # ── making one ────────────────────────────────────────────────────────────────────
 
@@ -217,12 +217,12 @@ class OccasionTable:
                 f"{len(labels)} occasions, got shape {cells.shape}. "
                 "Transpose it if the subjects are in the columns."
             )
-        ids = tuple(subjects) if subjects is not None else _default_ids(cells.shape[0])
-        low = _flags("below", below, cells)
-        high = _flags("above", above, cells)
-        lower = _limits("lower_limit", lower_limit, cells, low)
-        upper = _limits("upper_limit", upper_limit, cells, high)
-        step = _step(cells, resolution)
+        ids = tuple(subjects) if subjects is not None else default_ids(cells.shape[0])
+        low = cell_flags("below", below, cells)
+        high = cell_flags("above", above, cells)
+        lower = cell_limits("lower_limit", lower_limit, cells, low)
+        upper = cell_limits("upper_limit", upper_limit, cells, high)
+        step = reporting_step(cells, resolution)
         measured = ~np.isnan(cells)
         counts = CellCounts(
             values=int((measured & ~low & ~high).sum()),
@@ -569,7 +569,7 @@ class OccasionTable:
         """
         table = self
         for side in ("lower", "upper"):
-            table = _at_common_limit(table, side)
+            table = at_common_limit(table, side)
         return table
 
     def substitute(self, rule: str | float = "half") -> OccasionTable:
@@ -587,12 +587,12 @@ class OccasionTable:
             The cells stay marked as below. A substitute is a convention, not a measurement:
             show how the answer moves when it moves.
         """
-        factor, words = _rule(rule)
+        factor, words = substitute_factor(rule)
         if not self.below.any():
             return self
         raised = math.log(factor) if self.scale == "log" else 0.0
         filled = self.lower_limit + raised if raised else self.lower_limit * float(factor)
-        step, units = _substituted_units(self, factor)
+        step, units = substituted_units(self, factor)
         below = counted(int(self.below.sum()), "value")
         line = LedgerLine(
             "substitute",
@@ -619,7 +619,7 @@ class OccasionTable:
         if self.scale == "log":
             return self
         refused = [
-            _not_positive(self, i, j) for i, j in zip(*np.nonzero(self.values <= 0), strict=True)
+            not_positive(self, i, j) for i, j in zip(*np.nonzero(self.values <= 0), strict=True)
         ]
         if refused:
             raise DataError(refused, str(self.source.get("file", "")))
@@ -630,8 +630,8 @@ class OccasionTable:
             values=np.log(self.values),
             units=units,
             step=None if units is None else self.step,
-            lower_limit=_log_limits(self.lower_limit),
-            upper_limit=_log_limits(self.upper_limit),
+            lower_limit=log_limits(self.lower_limit),
+            upper_limit=log_limits(self.upper_limit),
             scale="log",
             ledger=self.ledger.add(LedgerLine("log", "natural logarithms of all values")),
         )
@@ -646,7 +646,7 @@ class OccasionTable:
         grid = np.ix_(list(rows), list(columns))
         arrays: dict[str, Any] = {
             name: None if getattr(self, name) is None else getattr(self, name)[grid]
-            for name in _ARRAYS
+            for name in ARRAYS
         }
         return replace(
             self,
@@ -702,7 +702,7 @@ class OccasionTable:
         if not isinstance(other, OccasionTable):
             return NotImplemented
         names = [f.name for f in fields(self) if f.name not in _HISTORY]
-        return all(_same(getattr(self, name), getattr(other, name)) for name in names)
+        return all(same(getattr(self, name), getattr(other, name)) for name in names)
 
     __hash__ = None  # type: ignore[assignment]  # holds arrays
 
@@ -731,27 +731,7 @@ class OccasionTable:
         )
 
 
-_ARRAYS: Mapping[str, Any] = MappingProxyType(
-    {
-        "values": np.float64,
-        "below": np.bool_,
-        "above": np.bool_,
-        "lower_limit": np.float64,
-        "upper_limit": np.float64,
-        "tokens": np.str_,
-        "units": np.int64,
-    }
-)
 _HISTORY = frozenset({"ledger", "source", "notes"})
-_RULE_WORDS = {"half": "half the limit", "root2": "the limit divided by √2", "limit": "the limit"}
-
-
-def _same(one: object, other: object) -> bool:
-    if isinstance(one, np.ndarray) and isinstance(other, np.ndarray):
-        return one.shape == other.shape and bool(
-            np.array_equal(one, other, equal_nan=one.dtype.kind == "f")
-        )
-    return bool(one == other)
 
 
 def _shown(cell: float | str | None, token: str) -> str:
@@ -760,171 +740,5 @@ def _shown(cell: float | str | None, token: str) -> str:
     return cell if isinstance(cell, str) else number(cell, 4)
 
 
-def _default_ids(n: int) -> tuple[str, ...]:
-    return tuple(f"S{i + 1}" for i in range(n))
-
-
 def _line(step: str, rows: Sequence[int], table: OccasionTable, what: str) -> LedgerLine:
     return LedgerLine(step, f"{what}: {listing([table.subjects[i] for i in rows])}")
-
-
-def _flags(argument: str, flags: ArrayLike | None, values: Floats) -> Bools:
-    if flags is None:
-        return np.zeros(values.shape, dtype=np.bool_)
-    array = np.array(flags, dtype=np.bool_)
-    if array.shape != values.shape:
-        raise ArgumentError(
-            f"`{argument}` must have the shape of `values` {values.shape}, got {array.shape}."
-        )
-    return array
-
-
-def _limits(argument: str, limit: ArrayLike | None, values: Floats, beyond: Bools) -> Floats:
-    if limit is None:
-        seen = np.unique(values[beyond])
-        if seen.size > 1:
-            shown = listing([number(value) for value in seen.tolist()])
-            raise ArgumentError(
-                f"`{argument}` must be declared when cells lie beyond different limits, got "
-                f"{shown}. Give one limit an occasion, or one a cell."
-            )
-        return np.full(values.shape, seen[0] if seen.size else np.nan)
-    try:
-        limits = np.broadcast_to(np.asarray(limit, dtype=np.float64), values.shape).copy()
-    except ValueError:
-        raise ArgumentError(
-            f"`{argument}` must be one number, one an occasion ({values.shape[1]}) or one a "
-            f"cell {values.shape}, got shape {np.shape(limit)}."
-        ) from None
-    limits[beyond & np.isnan(limits)] = values[beyond & np.isnan(limits)]
-    return limits
-
-
-def _step(values: Floats, resolution: float | None) -> Fraction | None:
-    if resolution is None:
-        return ties.decimal_step(values)
-    if not (math.isfinite(resolution) and resolution > 0):
-        raise ArgumentError(f"`resolution` must be a positive number, got {resolution!r}.")
-    return Fraction(repr(float(resolution)))
-
-
-def _check_consistent(table: OccasionTable) -> None:
-    shape = (len(table.subjects), len(table.occasions))
-    for name in _ARRAYS:
-        array = getattr(table, name)
-        if array is not None and array.shape != shape:
-            raise ArgumentError(f"`{name}` must have shape {shape}, got {array.shape}.")
-    infinite = np.argwhere(np.isinf(table.values))
-    if infinite.size:
-        i, j = infinite[0]
-        raise ArgumentError(
-            f"`values` must be finite or NaN for missing, got {table.values[i, j]} for subject "
-            f"{table.subjects[i]!r} at {table.occasions[j]!r}. Mark a value beyond a limit with "
-            "`below` or `above`."
-        )
-    both = (table.below & table.above) | (table.censored & table.missing)
-    if both.any():
-        i, j = np.argwhere(both)[0]
-        raise ArgumentError(
-            f"A cell must be one of measured, below, above or missing, got two for subject "
-            f"{table.subjects[i]!r} at {table.occasions[j]!r}."
-        )
-
-
-def _common_limit(table: OccasionTable, side: Literal["lower", "upper"]) -> float | None:
-    limits = (table.lower_limit if side == "lower" else table.upper_limit)[~table.missing]
-    limits = limits[~np.isnan(limits)]
-    if not limits.size:
-        return None
-    return float(limits.max() if side == "lower" else limits.min())
-
-
-def _at_common_limit(table: OccasionTable, side: Literal["lower", "upper"]) -> OccasionTable:
-    limit = _common_limit(table, side)
-    if limit is None:
-        return table
-    flag_name, limit_name = (
-        ("below", "lower_limit") if side == "lower" else ("above", "upper_limit")
-    )
-    flags, limits = getattr(table, flag_name), getattr(table, limit_name)
-    measured = ~table.missing & ~table.censored
-    beyond = table.values < limit if side == "lower" else table.values > limit
-    given_up = measured & beyond
-    moved = flags | given_up
-    if not given_up.any() and bool(np.all(limits[moved] == limit)):
-        return table
-    units = table.units
-    if units is not None:
-        units = _limit_units(table, limit, moved)
-    shown = number(math.exp(limit) if table.scale == "log" else limit)
-    what = (
-        f"all occasions compared at the common {side} limit {shown}: "
-        f"{counted(int(given_up.sum()), 'measured value')} given up"
-    )
-    return replace(
-        table,
-        **{
-            flag_name: moved,
-            limit_name: np.where(moved, limit, limits),
-            "values": np.where(moved, limit, table.values),
-            "units": units,
-            "step": None if units is None else table.step,
-        },
-        ledger=table.ledger.add(LedgerLine("recensored", what, cells=int(given_up.sum()))),
-    )
-
-
-def _limit_units(table: OccasionTable, limit: float, moved: Bools) -> NDArray[np.int64] | None:
-    step, units = table.step, table.units
-    if step is None or units is None:
-        return None
-    at_limit = units[moved & (table.values == limit)]
-    raw = math.exp(limit) if table.scale == "log" else limit
-    unit = int(at_limit[0]) if at_limit.size else round(Fraction(repr(raw)) / step)
-    return np.where(moved, unit, units)
-
-
-def _rule(rule: str | float) -> tuple[float | Fraction, str]:
-    if isinstance(rule, str):
-        check_choice("rule", rule, tuple(SUBSTITUTES))
-        return SUBSTITUTES[rule], _RULE_WORDS[rule]
-    if not 0 < rule <= 1:
-        raise ArgumentError(
-            f"`rule` must be a fraction of the limit in (0, 1] or one of "
-            f"{', '.join(map(repr, SUBSTITUTES))}, got {rule!r}."
-        )
-    return Fraction(repr(float(rule))), f"{rule:g} times the limit"
-
-
-def _substituted_units(
-    table: OccasionTable, factor: float | Fraction
-) -> tuple[Fraction | None, NDArray[np.int64] | None]:
-    # Half a limit is a whole multiple of half the step; a limit over √2 is no multiple at all.
-    if table.units is None or table.step is None or isinstance(factor, float):
-        return None, None
-    parts = factor.denominator
-    if int(np.abs(table.units).max()) * parts >= 2**53:
-        return None, None
-    scaled = np.where(table.below, factor.numerator * table.units, parts * table.units)
-    return table.step / parts, scaled
-
-
-def _not_positive(table: OccasionTable, i: int, j: int) -> Problem:
-    return Problem(
-        code="not positive",
-        message=(
-            f"subject {table.subjects[i]!r} has {number(float(table.values[i, j]))} at "
-            f"{table.occasions[j]!r}, which has no logarithm: below a limit, or a true zero?"
-        ),
-        action=(
-            "If it lies below a detection limit, write it as '<limit' (for instance '<0.3') or "
-            "declare the limit; if it is a true zero, analyze on the raw scale (--scale raw)."
-        ),
-        column=table.occasions[j],
-        text=number(float(table.values[i, j])),
-    )
-
-
-def _log_limits(limits: Floats) -> Floats:
-    positive = np.where(limits > 0, limits, np.nan)
-    return np.log(positive)
