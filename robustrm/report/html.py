@@ -80,8 +80,7 @@ def page(document: Document, drawings: Sequence[Drawing] = (), style: Style = "m
 
 def _said(document: Document, style: Style) -> dict[str, Any]:
     """Return every sentence of the page."""
-    overall = [document["omnibus"]] if document["omnibus"] else []
-    others = [*document["supplementary"], *document["beside"]]
+    overall, others = sentences.supporting_rows(document), sentences.other_rows(document)
     return {
         "marker": sentences.marker(document),
         "question": sentences.question(document),
@@ -111,9 +110,9 @@ def _set(document: Document, style: Style) -> dict[str, sheets.Sheet]:
     matrix, sets = sheets.inclusion_sheets(document)
     return {
         "primary": sheets.primary_sheet(document, style),
-        "omnibus": sheets.omnibus_sheet(document, style),
+        "overall": sheets.overall_sheet(document, style),
         "contrasts": sheets.beside_contrasts_sheet(document, style),
-        "overall": sheets.beside_overall_sheet(document, style),
+        "all_occasions": sheets.beside_overall_sheet(document, style),
         "summary": sheets.summary_sheet(document),
         "effects": sheets.effects_sheet(document, style),
         "occasions": sheets.occasions_sheet(document),

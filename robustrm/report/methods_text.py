@@ -58,6 +58,7 @@ def methods_paragraph(document: Document, style: Style = "medical") -> str:
         _adjusted(document),
         _estimates(document),
         _overall_method(document),
+        _companions_method(document),
         _beside_method(document),
         _limits_rule(document),
         _missing_rule(document),
@@ -126,21 +127,15 @@ def _adjusted(document: Document) -> str:
 
 def _estimates(document: Document) -> str:
     family = document["primary"]
-    names = {c["result"]["estimate"]["name"]: c["result"]["estimate"]["kind"]
-             for c in family["comparisons"] if c["result"]["estimate"]}  # fmt: skip
-    if not names:
+    shown = [c["estimate"] for c in family["comparisons"] if c["estimate"]]
+    if not shown:
         return ""
-    (name, kind), *_ = names.items()
-    level = level_text(family["level"])
+    name, kind = shown[0]["name"], shown[0]["kind"]
+    held = f"{'at least ' if kind == 'exact' else ''}{level_text(family['level'])}"
     if family["intervals"] == "simultaneous":
-        return f"Each {name} has {_article(kind)} interval; together they hold at least {level}."
+        return f"The estimate is the {name}, with {kind} intervals that together hold {held}."
     unadjusted = " and are not adjusted for their number" if len(family["comparisons"]) > 1 else ""
-    least = "at least " if kind == "exact" else ""
-    return f"Estimates are {name}s with {kind} intervals that hold {least}{level} each{unadjusted}."
-
-
-def _article(kind: str) -> str:
-    return f"an {kind}" if kind[:1] in "aeiou" else f"a {kind}"
+    return f"The estimate is the {name}, with {kind} intervals that hold {held} each{unadjusted}."
 
 
 def _overall_method(document: Document) -> str:
@@ -152,6 +147,11 @@ def _overall_method(document: Document) -> str:
         f"which are reported whatever it says. Its null hypothesis: "
         f"{_uncapped(row['result']['hypothesis'])}"
     )
+
+
+def _companions_method(document: Document) -> str:
+    titles = dict.fromkeys(in_sentence(row["title"]) for row in document["supplementary"])
+    return f"Beside these, as planned: {listing([*titles])}." if titles else ""
 
 
 def _beside_method(document: Document) -> str:

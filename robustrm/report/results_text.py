@@ -30,6 +30,7 @@ from robustrm.report.sentences import (
     marker,
     moves,
     skipped,
+    supporting_rows,
 )
 from robustrm.report.sheets import order_statistic, quartiles
 
@@ -43,7 +44,7 @@ def results_paragraph(document: Document, style: Style = "medical") -> str:
         *(_contrast(row, document, style) for row in document["primary"]["comparisons"]),
         _exploratory_p_values(document, style),
         _substitutes_found(document, style),
-        _overall(document, style),
+        *_overall(document, style),
         *_beside_contrasts(document, style),
         *_beside_overall(document, style),
         *_not_made(document),
@@ -127,7 +128,8 @@ def _p_values(row: Result, document: Document, style: Style) -> str:
     name = adjustment(document["primary"]) if row["role"] == "primary" else None
     if name is None or row["p_adjusted"] is None:
         return text
-    return f"{text}, {name}-adjusted {p_phrase(row['p_adjusted'], style)}"
+    adjusted = f"{name}-adjusted" if name[0].isupper() else "adjusted"
+    return f"{text}, {adjusted} {p_phrase(row['p_adjusted'], style)}"
 
 
 def _drawn(result: Result, style: Style) -> str:
@@ -169,15 +171,17 @@ def _range(low: float, high: float) -> str:
     return number(low) if number(low) == number(high) else span(low, high)
 
 
-def _overall(document: Document, style: Style) -> str:
-    row = document["omnibus"]
-    if row is None:
-        return ""
+def _overall(document: Document, style: Style) -> list[str]:
+    """Return one sentence for the overall test and for each of its companions."""
     label = "exploratory " if is_exploratory(document) else ""
-    found = _test(row, document, style, label)
-    w = row["result"]["details"].get("kendall_w")
-    agreement = f", Kendall's W = {bounded(w, style)}" if w is not None else ""
-    return f"Over all occasions the {in_sentence(row['title'])} gave {found}{agreement}."
+    sentences = []
+    for row in supporting_rows(document):
+        found = _test(row, document, style, label)
+        w = row["result"]["details"].get("kendall_w")
+        agreement = f", Kendall's W = {bounded(w, style)}" if w is not None else ""
+        title = in_sentence(row["title"])
+        sentences.append(f"Over all occasions the {title} gave {found}{agreement}.")
+    return sentences
 
 
 def _test(row: Result, document: Document, style: Style, label: str) -> str:

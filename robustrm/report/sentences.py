@@ -10,7 +10,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from robustrm._format import Style, counted, listing, restyled
+from robustrm._format import Style, counted, listing, p_cell, restyled
 from robustrm.methods.adjusting import TITLES
 from robustrm.report.document import Document
 
@@ -35,7 +35,7 @@ NULLS = {
 }
 ROLES = {
     "primary": "the planned contrasts",
-    "supporting": "the overall test that supports them",
+    "supporting": "overall tests that support them",
     "sensitivity": "the same question under other assumptions",
     "supplementary": "a question about another estimand",
 }
@@ -64,7 +64,7 @@ class Remark:
     text: str
 
 
-_PEOPLE = ("Friedman", "Wilcoxon", "Quade", "Page", "Skillings-Mack", "Hotelling")
+_PEOPLE = ("Winsorized", "Friedman", "Wilcoxon", "Quade", "Page", "Skillings-Mack", "Hotelling")
 
 
 def in_sentence(title: str) -> str:
@@ -155,8 +155,23 @@ _ADJUSTING = frozenset(TITLES) - {"none"}
 
 def planned_rows(document: Document) -> list[Result]:
     """Return the planned contrasts and the overall test."""
-    overall = [document["omnibus"]] if document["omnibus"] else []
-    return [*document["primary"]["comparisons"], *overall]
+    return [*document["primary"]["comparisons"], *_omnibus(document)]
+
+
+def supporting_rows(document: Document) -> list[Result]:
+    """Return the overall test and its companions."""
+    rows = [*_omnibus(document), *document["supplementary"]]
+    return [row for row in rows if row["role"] == "supporting"]
+
+
+def other_rows(document: Document) -> list[Result]:
+    """Return what is neither planned nor overall support."""
+    rows = [*document["supplementary"], *document["beside"]]
+    return [row for row in rows if row["role"] != "supporting"]
+
+
+def _omnibus(document: Document) -> list[Result]:
+    return [document["omnibus"]] if document["omnibus"] else []
 
 
 def all_rows(document: Document) -> list[Result]:
@@ -203,7 +218,22 @@ def note_text(note: Mapping[str, str], style: Style = "medical") -> str:
 
 def family_notes(document: Document, style: Style = "medical") -> list[str]:
     """Return what a reader must know of the planned family as a whole."""
-    return [note_text(note, style) for note in document["primary"]["notes"]]
+    family = [note_text(note, style) for note in document["primary"]["notes"]]
+    return [*_partitions(document, style), *family]
+
+
+def _partitions(document: Document, style: Style) -> list[str]:
+    """Say which hypothesis decided each p value of a closed family, beside that of Holm."""
+    told = []
+    for row in document["primary"]["comparisons"]:
+        details = row["result"]["details"]
+        if "partition" in details:
+            told.append(
+                f"{row['label']}: the adjusted P is that of the hypothesis which joins "
+                f"{details['partition']} ({NULLS[details['partition_null']]}); by Holm it would "
+                f"be {p_cell(details['p_holm'], style)}."
+            )
+    return told
 
 
 def moves(document: Document, label: str) -> str:

@@ -25,6 +25,7 @@ from robustrm.report.sentences import (
     adjustment,
     all_rows,
     is_exploratory,
+    supporting_rows,
 )
 
 ALL = "all occasions"
@@ -115,7 +116,7 @@ def primary_sheet(document: Document, style: Style = "medical") -> Sheet:
     together = " together" if family["intervals"] == "simultaneous" else ""
     interval = f"{level_text(family['level'])} CI{together}"
     headings = ["Comparison", "n", "Estimate", interval, "Level"]
-    headings += [letter, *([f"{letter}, {name}"] if name else []), "Null distribution"]
+    headings += [letter, *([f"{letter}, {name.split()[0]}"] if name else []), "Null distribution"]
     rows = []
     for row in family["comparisons"]:
         adjusted = [p_cell(row["p_adjusted"], style)] if name else []
@@ -138,24 +139,23 @@ def _primary_caption(document: Document) -> str:
     return f"Planned contrasts: {what}{_exploratory_label(document)}"
 
 
-def omnibus_sheet(document: Document, style: Style = "medical") -> Sheet:
-    """Return the overall test on one row; no row where it could not be made."""
-    row = document["omnibus"]
+def overall_sheet(document: Document, style: Style = "medical") -> Sheet:
+    """Return the overall tests; no row where none could be made."""
     headings = ("Test", "Subjects × occasions", "Statistic", "P", "Null distribution")
-    rows = [] if row is None else [_overall(row, style)]
-    caption = f"Overall test, supporting the planned contrasts{_exploratory_label(document)}"
-    return _sheet(caption, headings, rows, (0, 4))
+    lines = [Line(_overall(row, style), _is_apart(row)) for row in supporting_rows(document)]
+    caption = f"Overall tests, supporting the planned contrasts{_exploratory_label(document)}"
+    return Sheet(caption, headings, (Group("", _apart_last(lines)),), frozenset({0, 4}))
 
 
-def _overall(row: Result, style: Style) -> list[str]:
+def _overall(row: Result, style: Style) -> tuple[str, ...]:
     result = row["result"]
-    return [
+    return (
         row["title"],
         f"{result['n_subjects']} × {result['n_occasions']}",
         statistic(result),
         p_cell(result["p_value"], style),
         NULLS[result["null"]],
-    ]
+    )
 
 
 def beside_contrasts_sheet(document: Document, style: Style = "medical") -> Sheet:

@@ -15,7 +15,7 @@ from robustrm.report.sheets import (
     Sheet,
     beside_contrasts_sheet,
     beside_overall_sheet,
-    omnibus_sheet,
+    overall_sheet,
     primary_sheet,
 )
 
@@ -64,17 +64,18 @@ def _opening(document: Document) -> str:
 
 def _planned(document: Document, style: Style) -> str:
     counts = (_paragraph(line) for line in sentences.counts_instead(document))
-    return "\n".join([_table(primary_sheet(document, style)), *counts])
+    return "\n\n".join([_table(primary_sheet(document, style)), *counts])
 
 
 def _overall(document: Document, style: Style) -> str:
-    return _table(omnibus_sheet(document, style)) if document["omnibus"] else ""
+    sheet = overall_sheet(document, style)
+    return _table(sheet) if sheet.lines else ""
 
 
 def _beside(document: Document, style: Style) -> str:
     """Set the rows group by group; those on another footing are marked and stand last."""
     sheets = (beside_contrasts_sheet(document, style), beside_overall_sheet(document, style))
-    lines = [sentences.adjusters(sentences.all_rows(document))]
+    lines = [_paragraph(sentences.adjusters(sentences.all_rows(document)))]
     if any(line.apart for sheet in sheets for line in sheet.lines):
         lines.append("≠ rests on another n or scale than the planned row: not its equal.")
     tables = [_grouped(sheet) for sheet in sheets if sheet.lines]
