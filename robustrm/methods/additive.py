@@ -116,7 +116,8 @@ class AdditiveProblem:
     @property
     def observed_statistic(self) -> float:
         """The statistic of the table as it is."""
-        return float(self.statistic(self.form.values(self.observed, exact=False)))
+        exact = self.form.is_exact(self.tables)
+        return float(self.statistic(self.form.values(self.observed, exact=exact)))
 
     def tail(self, options: NullOptions) -> NullTail:
         """Return the tail probability of the observed sum under all arrangements.

@@ -130,7 +130,9 @@ def problem(table: OccasionTable) -> AdditiveProblem:
     scores = block_scores(used.order_codes())
     form = quadratic(_root_of_inverse(conditional_covariance(scores, observed)))
     tables = permutation_tables(scores, observed=observed)
-    return AdditiveProblem(used, scores, tables, form, np.asarray, "T")
+    # where every subject is tied throughout there is no covariance to divide by
+    factor = 1.0 if len(form.projection) else np.nan
+    return AdditiveProblem(used, scores, tables, form, lambda t: np.asarray(factor * t), "T")
 
 
 def conditional_covariance(scores: Floats, observed: Bools) -> Floats:

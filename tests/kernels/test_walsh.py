@@ -55,8 +55,9 @@ def test_the_rank_is_the_largest_that_keeps_the_level(n, level):
 
 @pytest.mark.parametrize(("n", "level"), [(5, 0.9375), (6, 0.96875), (4, 0.875)])
 def test_a_level_that_is_attained_exactly_is_not_lost_to_rounding(n, level):
-    assert interval_rank(n, level).level == level
-    assert interval_rank(n, level).rank == 1
+    found = interval_rank(n, level)
+    assert found is not None
+    assert (found.level, found.rank) == (level, 1)
 
 
 def test_one_call_does_many_samples():

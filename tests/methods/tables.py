@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 from collections.abc import Sequence
 from fractions import Fraction
+from typing import TypeVar
 
 import numpy as np
 from hypothesis import strategies as st
@@ -28,7 +29,17 @@ def pair_of(differences: Sequence[float], base: float = 1000) -> rm.OccasionTabl
     return raw([[base, base + d] for d in differences])
 
 
-def tables(n=st.integers(2, 8), k=st.integers(2, 4), least=1, most=9):
+T = TypeVar("T")
+N, K = st.integers(2, 8), st.integers(2, 4)
+
+
+def present(value: T | None) -> T:
+    """Return what must be there."""
+    assert value is not None
+    return value
+
+
+def tables(n=N, k=K, least=1, most=9):
     """Whole values in a small range: ties within and between subjects are common."""
     cell = st.integers(least, most)
     return st.tuples(n, k).flatmap(
@@ -40,7 +51,10 @@ def tables(n=st.integers(2, 8), k=st.integers(2, 4), least=1, most=9):
     )
 
 
-def measured(n=st.integers(3, 12), k=st.integers(3, 5)):
+MANY, OCCASIONS = st.integers(3, 12), st.integers(3, 5)
+
+
+def measured(n=MANY, k=OCCASIONS):
     """Values with three decimals over five orders of magnitude, as a skewed marker has them."""
     cell = st.integers(10, 10**6).map(lambda units: units / 1000)
     return st.tuples(n, k).flatmap(

@@ -126,7 +126,9 @@ def test_a_table_without_any_variation_has_no_share_explained():
 
 
 def test_one_subject_is_refused_in_words():
-    with pytest.raises(rm.TooFewError, match="needs at least 2 subjects with all 3 occasions, got 1"):
+    with pytest.raises(
+        rm.TooFewError, match="needs at least 2 subjects with all 3 occasions, got 1"
+    ):
         rm.anova(raw([[1, 2, 4]]))
 
 

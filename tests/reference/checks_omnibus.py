@@ -56,7 +56,7 @@ ANOVA: dict[str, Callable[[rm.TestResult], Any]] = {
 def table_of(name: str) -> rm.OccasionTable:
     """Make the table of a case; ranks serve as values."""
     data = case(name).data
-    values = data.get("X", data.get("ranks"))
+    values = data["X"] if "X" in data else data["ranks"]
     labels = [f"occasion {j + 1}" for j in range(len(values[0]))]
     return rm.OccasionTable.from_array(values, occasions=labels)
 
@@ -138,30 +138,27 @@ def recomputed_critical(key: str) -> float | None:
     return None if value is None else round(value, 6)
 
 
-def kendall_tails(keys: dict[str, float]) -> dict[str, float]:
-    """Upper tails of Kendall's S for 3 judges and 5 objects: S is the sum of squares, T / 4."""
-    found = exact_law(3, 5)
-    return {key: found.at_least(4 * float(key)).p_value for key in keys}
+def kendall_tail(s: str) -> float:
+    """Upper tail of Kendall's S for 3 judges and 5 objects: S is the sum of squares, T / 4."""
+    return exact_law(3, 5).at_least(4 * float(s)).p_value
 
 
 def _exact_checks() -> Iterator[Check]:
     tails = case("friedman_exact_tail_table")
     for key, printed in tails.published.items():
         k, n = int(key[1]), int(key[3])
-        find = functools.partial(printed_tails, n, k, printed)
-        yield Check(tails.id, f"published.{key}", find)
+        yield Check(tails.id, f"published.{key}", functools.partial(printed_tails, n, k, printed))
         yield Check(tails.id, f"recomputed.{key}", functools.partial(tail_list, n, k))
     table = case("friedman_exact_critical_table")
-    for k in table.published:
-        yield Check(table.id, f"published.{k}", functools.partial(critical_table, k))
+    for columns in table.published:
+        find = functools.partial(critical_table, columns)
+        yield Check(table.id, f"published.{columns}", find)
     for key in table.recomputed:
-        find = functools.partial(recomputed_critical, key)
-        yield Check(table.id, f"recomputed.{key}", find)
+        yield Check(table.id, f"recomputed.{key}", functools.partial(recomputed_critical, key))
     kendall = case("kendall_S_exact_n5_m3")
     for section in ("published", "recomputed"):
         for key in kendall.at(section):
-            find = functools.partial(lambda key: kendall_tails({key: 0})[key], key)
-            yield Check(kendall.id, f"{section}.{key}", find)
+            yield Check(kendall.id, f"{section}.{key}", functools.partial(kendall_tail, key))
 
 
 # ── Friedman's test and Kendall's W ───────────────────────────────────────────────────────────
@@ -192,7 +189,9 @@ def _friedman_checks() -> Iterator[Check]:
             find = functools.partial(lambda n, o: FRIEDMAN[o](friedman(n)), name, ours)
             yield Check(name, f"published.{field}", find)
     yield Check(
-        "friedman_hw_rounding", "recomputed.scipy", lambda: friedman("friedman_hw_rounding").statistic
+        "friedman_hw_rounding",
+        "recomputed.scipy",
+        lambda: friedman("friedman_hw_rounding").statistic,
     )
     yield from of_result("kendall_w_siegel_applicants", "recomputed", friedman, FRIEDMAN)
     for section, field in (("published", "s"), ("recomputed", "S")):
@@ -235,7 +234,9 @@ def _anova_checks() -> Iterator[Check]:
         find = functools.partial(lambda o: ANOVA[o](anova("rmanova_ergostool")), ours)
         yield Check("rmanova_ergostool", f"published.{field}", find)
     yield Check("rmanova_ergostool", "published.sums", lambda: _means("rmanova_ergostool", 9))
-    yield Check("rmanova_maxwell_delaney", "published.means", lambda: _means("rmanova_maxwell_delaney"))
+    yield Check(
+        "rmanova_maxwell_delaney", "published.means", lambda: _means("rmanova_maxwell_delaney")
+    )
     yield Check(
         "rmanova_maxwell_delaney",
         "published.SS_A",

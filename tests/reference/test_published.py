@@ -11,13 +11,18 @@ from pathlib import Path
 
 import pytest
 
-from tests.reference import checks_omnibus, checks_other, checks_pairs
+from tests.reference import checks_additive, checks_omnibus, checks_other, checks_pairs
 from tests.reference.cases import Check, agrees, all_cases, leaves, not_used
 
 pytestmark = pytest.mark.reference
 
 ROOT = Path(__file__).resolve().parents[2]
-CHECKS = (*checks_omnibus.CHECKS, *checks_pairs.CHECKS, *checks_other.CHECKS)
+CHECKS = (
+    *checks_omnibus.CHECKS,
+    *checks_additive.CHECKS,
+    *checks_pairs.CHECKS,
+    *checks_other.CHECKS,
+)
 
 
 @pytest.mark.parametrize("check", CHECKS, ids=str)

@@ -1,9 +1,9 @@
 """One set of random rearrangements for all the tests of one data set.
 
-Many tests on one table (panels, grids of specifications, level tables) ask how their statistics move
-when the same subjects are rearranged in the same way. The score vectors of all tests are laid side
-by side, so that one random number rearranges them together; tables of a few subjects are added up
-beforehand, so that it rearranges several subjects at once.
+Many tests on one table (panels, grids of specifications, level tables) ask how their statistics
+move when the same subjects are rearranged in the same way. The score vectors of all tests are laid
+side by side, so that one random number rearranges them together; tables of a few subjects are
+added up beforehand, so that it rearranges several subjects at once.
 
 A p value is (b + 1) / (B + 1) with b of the B draws at least as large as the observed statistic
 (Phipson & Smyth 2010), which keeps P(p <= a) <= a whatever B is. Equality is judged on the scale of
@@ -154,7 +154,7 @@ def _pre_added(tables: Array, draws: int) -> Iterator[Array]:
 
 
 def _added(tables: Array) -> Array:
-    """Sums of one vector from each of g tables, (groups, g, m, d) -> (groups, m^g, d)."""
+    """Add one vector from each of g tables, (groups, g, m, d) -> (groups, m^g, d)."""
     groups, g, _, d = tables.shape
     sums = tables[:, 0]
     for subject in range(1, g):

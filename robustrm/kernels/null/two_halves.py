@@ -21,10 +21,12 @@ Processing Systems 13:521-527.
 from __future__ import annotations
 
 import math
+import os
 from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
+import numpy.typing as npt
 
 from robustrm.kernels.null.symmetry import Classes, sort_within
 from robustrm.kernels.null.tables import Array, ListedRow, merge_rows, read_only
@@ -33,6 +35,9 @@ from robustrm.kernels.null.tables import Array, ListedRow, merge_rows, read_only
 Half = tuple[Array, Array]
 # Half sums nearer than this share of the largest magnitude are one: a hundredth of the tolerance.
 GRID = 1e-12
+# Strips of half sums shared out to the processors: at most so many, of about this many or more.
+STRIPS = 8
+STRIP = 2_000
 
 
 def split(sizes: Sequence[int]) -> tuple[list[int], list[int]]:
@@ -87,11 +92,12 @@ def folded_halves(
     """
     sides = split([table.size for table in tables])
     own, other = sides if folded in sides[0] else sides[::-1]
-    grid = GRID * math.fsum(tables[i].norm for i in own)
+    seen = [projected(table, projection) for table in tables]
     sums, weights = half_sums([tables[i] for i in own], projection.shape[1])
     sums = sort_within(sums, classes) @ projection.T
-    seen = [projected(tables[i], projection) for i in other]
-    return merge_rows(sums, weights, grid=grid), half_sums(seen, len(projection))
+    grid = GRID * math.fsum(seen[i].norm for i in own)
+    first = merge_rows(sums, weights, grid=grid)
+    return first, half_sums([seen[i] for i in other], len(projection))
 
 
 def projected(table: ListedRow, projection: Array) -> ListedRow:
@@ -113,18 +119,34 @@ def upper_tail(first: Half, second: Half, floor: float) -> tuple[float, int]:
     -------
     tuple of float and int
     """
-    from scipy.spatial import cKDTree  # here, because it is slow to import
-
-    (sums, weights), (others, other_weights) = first, second
-    total = int(weights.sum()) * int(other_weights.sum())
+    total = int(first[1].sum()) * int(second[1].sum())
     if floor < 0:
         return float(total), total
-    # a plain count is a quarter faster than a weighted one
+    return float(total - _within(first, second, math.sqrt(floor))), total
+
+
+def _within(first: Half, second: Half, radius: float) -> float:
+    """Weight of the pairs of half sums with |a + b| at most `radius`.
+
+    The first list is cut into strips that are counted side by side, for which SciPy lets go of the
+    interpreter. Counts are whole numbers: how many processors there are changes no answer.
+    """
+    from concurrent.futures import ThreadPoolExecutor  # here, because both are slow to import
+
+    from scipy.spatial import cKDTree
+
+    (sums, weights), (others, other_weights) = first, second
+    mirrored = cKDTree(-others)
+    # A plain count is a quarter faster than a weighted one.
     is_plain = bool((weights == 1).all() and (other_weights == 1).all())
-    within = cKDTree(sums).count_neighbors(
-        cKDTree(-others), math.sqrt(floor), weights=None if is_plain else (weights, other_weights)
-    )
-    return float(total - within), total
+
+    def count(strip: npt.NDArray[np.int64]) -> float:
+        pair = None if is_plain else (weights[strip], other_weights)
+        return float(cKDTree(sums[strip]).count_neighbors(mirrored, radius, weights=pair))
+
+    strips = np.array_split(np.argsort(sums[:, 0]), min(STRIPS, math.ceil(len(sums) / STRIP)))
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        return sum(pool.map(count, strips))
 
 
 def largest(first: Half, second: Half) -> float:
