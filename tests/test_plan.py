@@ -1,0 +1,199 @@
+"""The plan: its defaults, its file, its digest, and what it refuses."""
+
+from __future__ import annotations
+
+import dataclasses
+import re
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+import robustrm as rm
+from robustrm.methods.registry import METHODS, P_ADJUSTMENTS
+
+# The defaults that the package promises; a change of one is a change of every default analysis.
+DEFAULTS = {
+    "marker_kind": "concentration",
+    "scale": None,
+    "contrasts": "first",
+    "pair": "signed_rank",
+    "zeros": "pratt",
+    "adjust": "holm",
+    "intervals": "separate",
+    "level": 0.95,
+    "sides": 2,
+    "substitute": "half",
+    "in_time": True,
+    "stages": (9_999, 99_999, 999_999),
+    "seed": None,
+}
+
+LABEL = st.text(min_size=1, max_size=6).filter(str.strip)
+PAIRS = st.lists(st.lists(LABEL, min_size=2, max_size=2, unique=True), min_size=1, max_size=3)
+PLANS = st.builds(
+    rm.Plan,
+    marker_kind=st.sampled_from(["concentration", "count", "score"]),
+    scale=st.sampled_from([None, "raw", "log"]),
+    contrasts=st.one_of(st.sampled_from(["first", "all", "successive"]), PAIRS),
+    zeros=st.sampled_from(["pratt", "drop"]),
+    adjust=st.sampled_from(P_ADJUSTMENTS),
+    intervals=st.sampled_from(["separate", "simultaneous"]),
+    level=st.floats(0.001, 0.999),
+    sides=st.sampled_from([1, 2]),
+    direction=st.sampled_from(["greater", "less"]),
+    substitute=st.sampled_from(["half", "root2", "limit"]),
+    in_time=st.booleans(),
+    purpose=st.sampled_from(["exploratory", "confirmatory"]),
+    design=st.sampled_from(["single-arm", "randomised-order"]),
+    stages=st.sets(st.integers(99, 10**7), min_size=1, max_size=3).map(lambda s: tuple(sorted(s))),
+    seed=st.one_of(st.none(), st.integers(0, 2**62)),
+)
+
+
+def test_every_default_is_the_promised_one():
+    plan = rm.Plan()
+    assert {name: getattr(plan, name) for name in DEFAULTS} == DEFAULTS
+
+
+def test_the_default_methods_are_on_offer():
+    kinds = {method.name: method.kind for method in METHODS}
+    assert kinds[rm.Plan().pair] == "pair"
+    assert kinds[rm.Plan().omnibus] == "omnibus"
+
+
+@pytest.mark.parametrize(
+    ("kind", "declared", "used"),
+    [
+        ("concentration", None, "log"),
+        ("count", None, "raw"),
+        ("score", None, "raw"),
+        ("concentration", "raw", "raw"),
+        ("count", "log", "log"),
+    ],
+)
+def test_the_scale_is_the_declared_one_or_follows_the_kind_of_marker(kind, declared, used):
+    assert rm.Plan(marker_kind=kind, scale=declared).used_scale == used
+
+
+def test_one_sided_plans_state_their_direction():
+    assert rm.Plan().alternative == "two-sided"
+    assert rm.Plan(sides=1, direction="less").alternative == "less"
+
+
+# ── the file ──────────────────────────────────────────────────────────────────────────────────
+
+
+@pytest.mark.property
+@given(plan=PLANS)
+def test_a_plan_comes_back_from_its_file(plan, tmp_path_factory):
+    path = tmp_path_factory.mktemp("plan") / "plan.toml"
+    plan.save(path)
+    loaded = rm.Plan.load(path)
+    assert loaded == plan
+    assert loaded.digest == plan.digest
+    assert [p.name for p in path.parent.iterdir()] == ["plan.toml"]
+
+
+@pytest.mark.property
+@given(one=PLANS, other=PLANS)
+def test_equal_plans_and_only_they_have_equal_digests(one, other):
+    assert (one == other) == (one.digest == other.digest)
+    assert re.fullmatch("[0-9a-f]{64}", one.digest)
+
+
+def test_every_key_moves_the_digest():
+    plan = rm.Plan(scale="log", seed=1)
+    changes = {
+        "marker_kind": "count", "scale": "raw", "contrasts": "all", "pair": "paired_t",
+        "omnibus": "anova", "zeros": "drop", "adjust": "hommel", "intervals": "simultaneous",
+        "level": 0.9, "sides": 1, "direction": "less", "substitute": "limit", "in_time": False,
+        "purpose": "confirmatory", "design": "randomised-order", "stages": (99,), "seed": 2,
+    }  # fmt: skip
+    assert {f.name for f in dataclasses.fields(rm.Plan)} <= set(changes)
+    digests = {plan.replace(**{name: value}).digest for name, value in changes.items()}
+    assert len(digests | {plan.digest}) == len(changes) + 1
+
+
+def test_pairs_may_be_given_as_lists_and_are_kept_as_tuples():
+    plan = rm.Plan().replace(contrasts=[["week 0", "week 6"]])
+    assert plan.contrasts == (("week 0", "week 6"),)
+    assert hash(plan) == hash(rm.Plan(contrasts=(("week 0", "week 6"),)))
+
+
+def test_replacing_leaves_the_plan_as_it_was():
+    plan = rm.Plan()
+    assert plan.replace(level=0.9).level == 0.9
+    assert plan.level == 0.95
+    with pytest.raises(dataclasses.FrozenInstanceError):
+        plan.level = 0.9  # type: ignore[misc]  # it is read-only
+
+
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("adjsut = 'holm'", r"The plan has no key 'adjsut'\. Did you mean 'adjust'\?"),
+        ("colour = 'blue'", r"The plan has no key 'colour'\. Keys are: marker_kind, "),
+        ("level = 95", r"'p\.toml' is refused: `level` must be in \(0, 1\), got 95\. .* 0\.95\?"),
+        ("adjust = 'holn'", r"`adjust` must be one of .* got 'holn'\. Did you mean 'holm'\?"),
+        ("contrasts = [['a', 'a']]", "`contrasts` must be one of 'first', 'all', 'successive' or"),
+        ("seed = -1", "`seed` must be a whole number of at least 0, got -1"),
+        ("level = ", r"The plan 'p\.toml' is not valid TOML"),
+    ],
+)
+def test_a_file_that_is_not_understood_is_refused_whole(text, message, tmp_path):
+    path = tmp_path / "p.toml"
+    path.write_text(text, encoding="utf-8")
+    with pytest.raises(rm.PlanError, match=message):
+        rm.Plan.load(path)
+
+
+def test_a_file_that_is_not_there_or_not_text_is_refused(tmp_path):
+    with pytest.raises(rm.PlanError, match=r"The plan 'none\.toml' cannot be read: No such file"):
+        rm.Plan.load(tmp_path / "none.toml")
+    (tmp_path / "p.toml").write_bytes(b"\xff\xfe\x00")
+    with pytest.raises(rm.PlanError, match="is not valid TOML"):
+        rm.Plan.load(tmp_path / "p.toml")
+
+
+# ── values outside their range ────────────────────────────────────────────────────────────────
+
+
+@pytest.mark.parametrize(
+    ("changes", "message"),
+    [
+        ({"marker_kind": "concentraton"}, r"`marker_kind` must be .*mean 'concentration'\?"),
+        ({"scale": "ln"}, "`scale` must be one of 'raw', 'log', got 'ln'"),
+        ({"contrasts": "frist"}, r"`contrasts` must be one of .* Did you mean 'first'\?"),
+        ({"contrasts": ()}, "`contrasts` must be one of .* or pairs of two different occasions"),
+        ({"contrasts": [("a", "b", "c")]}, "pairs of two different occasions"),
+        ({"pair": "friedman"}, "`pair` must be one of 'signed_rank'"),
+        ({"pair": "signed_ranks"}, r"Did you mean 'signed_rank'\?"),
+        ({"omnibus": "paired_t"}, "`omnibus` must be one of 'friedman'"),
+        ({"zeros": "keep"}, "`zeros` must be one of 'pratt', 'drop', got 'keep'"),
+        ({"intervals": "joint"}, "`intervals` must be one of"),
+        ({"level": 0}, r"`level` must be in \(0, 1\), got 0\."),
+        ({"level": 1.0}, r"`level` must be in \(0, 1\), got 1\.0"),
+        ({"level": True}, r"`level` must be in \(0, 1\), got True"),
+        ({"sides": 3}, "`sides` must be 1 or 2, got 3"),
+        ({"sides": True}, "`sides` must be 1 or 2, got True"),
+        ({"direction": "up"}, "`direction` must be one of 'greater', 'less', got 'up'"),
+        ({"substitute": "zero"}, "`substitute` must be one of 'half', 'root2', 'limit'"),
+        ({"in_time": "yes"}, "`in_time` must be true or false, got 'yes'"),
+        ({"purpose": "pilot"}, "`purpose` must be one of 'exploratory', 'confirmatory'"),
+        ({"design": "parallel"}, "`design` must be one of 'single-arm', 'randomised-order'"),
+        ({"stages": (999, 99)}, "`stages` must be rising whole numbers of at least 99"),
+        ({"stages": ()}, "`stages` must be rising whole numbers of at least 99"),
+        ({"stages": (10,)}, "`stages` must be rising whole numbers of at least 99"),
+        ({"seed": 1.5}, "`seed` must be a whole number of at least 0, got 1.5"),
+        ({"seed": True}, "`seed` must be a whole number of at least 0, got True"),
+    ],
+)
+def test_a_value_outside_its_range_is_refused_with_the_rule(changes, message):
+    with pytest.raises(rm.ArgumentError, match=message):
+        rm.Plan().replace(**changes)
+
+
+def test_an_unknown_key_is_refused_with_the_nearest():
+    with pytest.raises(rm.ArgumentError, match=r"no key 'intervalls'\. Did you mean 'intervals'\?"):
+        rm.Plan().replace(intervalls="separate")
