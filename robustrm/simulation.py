@@ -39,23 +39,23 @@ BLOCK = 100
 
 
 def _normal(rng: np.random.Generator, shape: Shape) -> Floats:
-    """Standard normal."""
+    """Draw from the standard normal law."""
     return rng.standard_normal(shape)
 
 
 def _t3(rng: np.random.Generator, shape: Shape) -> Floats:
-    """Student's t on 3 degrees of freedom over its SD √3."""
+    """Draw Student's t on 3 degrees of freedom over its SD √3."""
     return np.asarray(rng.standard_t(3, shape) / math.sqrt(3))
 
 
 def _contaminated(rng: np.random.Generator, shape: Shape) -> Floats:
-    """Normal, with probability 0.1 of SD 3 (Tukey 1960), over √(0.9 + 0.1·9)."""
+    """Draw normal errors, one in ten of SD 3 (Tukey 1960), over √(0.9 + 0.1·9)."""
     widened = np.where(rng.random(shape) < 0.1, 3.0, 1.0)
     return np.asarray(widened * rng.standard_normal(shape) / math.sqrt(1.8))
 
 
 def _skewed(rng: np.random.Generator, shape: Shape) -> Floats:
-    """Standard exponential less its mean 1: skewness 2."""
+    """Draw standard exponential errors less their mean 1: skewness 2."""
     return np.asarray(rng.standard_exponential(shape) - 1)
 
 
@@ -238,7 +238,7 @@ def draw(design: Design, datasets: int, *, seed: int, start: int = 0) -> Floats:
 
 
 def _errors(design: Design, rng: np.random.Generator) -> Floats:
-    """Errors of mean 0 and variance 1, (BLOCK, n, k), with serial correlation where asked."""
+    """Draw errors of mean 0 and variance 1, (BLOCK, n, k), with serial correlation where asked."""
     errors = ERRORS[design.errors](rng, (BLOCK, design.n, design.k))
     if design.rho:
         rest = math.sqrt(1 - design.rho**2)

@@ -19,7 +19,6 @@ from robustrm._checks import check_choice, check_count
 from robustrm.errors import ArgumentError
 from robustrm.kernels import scores
 from robustrm.kernels.null.shared import shared_permutation_p
-from robustrm.methods.adjusting import adjusted
 from robustrm.methods.closed import joins, partitions_of
 from robustrm.simulation import BLOCK, Design, draw_block, stream
 from robustrm.trials.p_values import DRAWS, PERMUTED, Progress, signed_rank_exact
@@ -95,7 +94,7 @@ def adjusted_p_values(
 def _of_block(
     values: Floats, families: Sequence[str], draws: int, rng: np.random.Generator
 ) -> Floats:
-    """Adjusted p values of given data sets, (B, families, pairs)."""
+    """Return the adjusted p values of given data sets, (B, families, pairs)."""
     found = {HOLM: holm_p(values)} if HOLM in families else {}
     closed = [family for family in families if family in CLOSED]
     if closed:
@@ -134,4 +133,10 @@ def holm_p(values: Floats) -> Floats:
     """Give Holm's adjusted exact signed-rank p values of all pairs, (B, n, k) -> (B, pairs)."""
     pairs = all_pairs(values.shape[-1])
     raw = np.stack([signed_rank_exact(values[..., list(pair)]) for pair in pairs], axis=1)
-    return np.array([adjusted(row, "holm") for row in raw.tolist()])
+    # by hand, because the library takes one family at a time, at a tenth of a second each
+    order = np.argsort(raw, axis=1)
+    factors = np.arange(len(pairs), 0, -1)
+    steps = np.maximum.accumulate(factors * np.take_along_axis(raw, order, axis=1), axis=1)
+    found = np.empty_like(raw)
+    np.put_along_axis(found, order, np.minimum(steps, 1.0), axis=1)
+    return found

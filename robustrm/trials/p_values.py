@@ -145,9 +145,14 @@ def p_values_of(
     return np.stack([found[test] for test in tests], axis=1)
 
 
+def needs_draws(test: str, design: Design) -> bool:
+    """Whether the p value of a test comes from random rearrangements of each data set."""
+    return test not in _looked_up(design.n, design.k, tied=design.limit > 0)
+
+
 def _looked_up(n: int, k: int, *, tied: bool) -> dict[str, Callable[[Floats], Floats]]:
-    """Tests whose p values need no rearrangement of the data set."""
-    found = {"anova": anova_p, "paired_t": paired_t_p}
+    """Return the tests whose p values need no rearrangement of the data set."""
+    found: dict[str, Callable[[Floats], Floats]] = {"anova": anova_p, "paired_t": paired_t_p}
     if not tied:
         found |= {"signed_rank": signed_rank_exact, "sign_test": sign_test_exact}
         if _friedman_law(n, k) is not None:
@@ -158,13 +163,13 @@ def _looked_up(n: int, k: int, *, tied: bool) -> dict[str, Callable[[Floats], Fl
 def _mirrored_p(
     values: Floats, tests: Sequence[str], draws: int, rng: np.random.Generator
 ) -> Floats:
-    """P values of the tests that mirror, (tests, B); narrow score vectors are filled with zeros."""
+    """Return p values of tests that mirror, (tests, B); short vectors are filled with zeros."""
     vectors = [MIRRORED[test](values) for test in tests]
     widest = max(vector.shape[-1] for vector in vectors)
     filled = np.zeros((len(values), len(tests), values.shape[1], widest))
     for place, vector in enumerate(vectors):
         filled[:, place, :, : vector.shape[-1]] = vector
-    return np.transpose([shared_flip_p(each, draws, rng) for each in filled])
+    return np.stack([shared_flip_p(each, draws, rng) for each in filled], axis=1)
 
 
 def _change(values: Floats) -> Floats:
@@ -198,21 +203,24 @@ def _signed_rank_law(n: int) -> Law | None:
 
 def friedman_exact(values: Floats) -> Floats:
     """Give Friedman's exact p values of data sets (B, n, k) without ties."""
-    return _upper_tails(_friedman_law(*values.shape[-2:]), between(scores.rank_scores(values)))
+    n, k = values.shape[-2:]
+    return _upper_tails(_friedman_law(n, k), between(scores.rank_scores(values)))
 
 
 def signed_rank_exact(values: Floats) -> Floats:
     """Give the exact two-sided signed-rank p values, last against first, without ties."""
     line = _signed_ranks(values).sum(axis=-1)
     # the law is symmetric about zero, so both tails are twice the one that was reached
-    return np.minimum(1.0, 2 * _upper_tails(_signed_rank_law(values.shape[-2]), np.abs(line)))
+    tail = _upper_tails(_signed_rank_law(values.shape[-2]), np.abs(line))
+    return np.minimum(1.0, 2 * tail)
 
 
 def sign_test_exact(values: Floats) -> Floats:
     """Give the exact two-sided sign-test p values, last against first, without ties."""
     n = values.shape[-2]
     rises = np.count_nonzero(_change(values) > 0, axis=-1)
-    return np.minimum(1.0, 2 * special.bdtr(np.minimum(rises, n - rises), n, 0.5))
+    tail: Floats = special.bdtr(np.minimum(rises, n - rises), n, 0.5)
+    return np.minimum(1.0, 2 * tail)
 
 
 def anova_p(values: Floats) -> Floats:
