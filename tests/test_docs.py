@@ -205,12 +205,12 @@ def test_every_problem_code_is_on_the_reading_page():
 
 def test_every_note_of_reading_is_on_the_reading_page():
     told = first_column(section("docs/guide/reading.md", "What is noticed and left as it is"))
-    assert sorted(told) == sorted(codes("Note", of_rooms("reading", "records", "table.py")))
+    assert sorted(told) == sorted(codes("Note", of_rooms("reading", "records", "table")))
 
 
 def test_every_note_of_an_analysis_is_on_the_report_page():
     told = first_column(section("docs/guide/report.md", "Notes"))
-    assert sorted(told) == sorted(codes("Note", of_rooms("methods", "analysis.py")))
+    assert sorted(told) == sorted(codes("Note", of_rooms("methods", "analysis")))
 
 
 def test_codes_are_found_where_a_function_passes_them_on(tmp_path: Path):

@@ -91,7 +91,8 @@ def test_a_stale_page_is_seen():
 @pytest.mark.cli
 def test_the_readme_shows_what_the_command_prints(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
     readme = (ROOT / "README.md").read_text(encoding="utf-8")
-    commands = re.findall(r"^\.venv/bin/robustrm (.*)$", readme, re.MULTILINE)
+    (block,) = re.findall(r"<!-- run-command -->(.*?)<!-- /run-command -->", readme, re.DOTALL)
+    commands = re.findall(r"\.venv/bin/robustrm ([^&`]*)", block)
     (shown,) = re.findall(r"```text\n(.*?)```", readme, re.DOTALL)
     monkeypatch.chdir(tmp_path)
     results = [CliRunner().invoke(main, shlex.split(command)) for command in commands]

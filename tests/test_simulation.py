@@ -6,6 +6,7 @@ Tolerances are five standard errors of the number drawn, from the closed form of
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 import pytest
@@ -14,14 +15,14 @@ from hypothesis import strategies as st
 from scipy import special
 
 from robustrm.errors import ArgumentError
-from robustrm.simulation import BLOCK, Design, draw, draw_block, stream
+from robustrm.simulation import BLOCK, Design, Errors, draw, draw_block, stream
 
 DATASETS = 1_000
 
 # P(error <= x), from the definition of each law.
-CDF = {
+CDF: dict[str, Callable[[float], float]] = {
     "normal": special.ndtr,
-    "t3": lambda x: special.stdtr(3, x * math.sqrt(3)),
+    "t3": lambda x: float(special.stdtr(3, x * math.sqrt(3))),
     "contaminated": lambda x: (
         0.9 * special.ndtr(x * math.sqrt(1.8)) + 0.1 * special.ndtr(x * math.sqrt(1.8) / 3)
     ),
@@ -31,20 +32,20 @@ CDF = {
 FOURTH = {"normal": 3.0, "contaminated": 27 / 3.24, "skewed": 9.0}
 
 
-def errors_of(name: str) -> np.ndarray:
+def errors_of(name: Errors) -> np.ndarray:
     return draw(Design(n=10, k=3, errors=name, between_sd=0.0), DATASETS, seed=4)
 
 
 @pytest.mark.parametrize("name", CDF)
 @pytest.mark.parametrize("x", [-1.5, -0.6, 0.0, 0.4, 1.2, 2.5])
-def test_errors_follow_their_law(name: str, x: float):
+def test_errors_follow_their_law(name: Errors, x: float):
     values, expected = errors_of(name), CDF[name](x)
     standard_error = math.sqrt(expected * (1 - expected) / values.size)
     assert abs((values <= x).mean() - expected) <= 5 * standard_error + 1e-12
 
 
 @pytest.mark.parametrize("name", CDF)
-def test_errors_have_mean_zero_and_variance_one(name: str):
+def test_errors_have_mean_zero_and_variance_one(name: Errors):
     values = errors_of(name)
     assert abs(values.mean()) <= 5 / math.sqrt(values.size)
     if name in FOURTH:  # t on 3 degrees of freedom has no fourth moment
@@ -53,7 +54,7 @@ def test_errors_have_mean_zero_and_variance_one(name: str):
 
 
 @pytest.mark.parametrize("name", ["lognormal", "log-t3"])
-def test_a_log_law_is_the_exponential_of_its_symmetric_one(name: str):
+def test_a_log_law_is_the_exponential_of_its_symmetric_one(name: Errors):
     design = Design(n=10, k=2, errors=name, between_sd=0.0, within_sd=0.5, shift=(0.0, 0.7))
     logs = np.log(draw(design, DATASETS, seed=4))
     law = CDF["normal" if name == "lognormal" else "t3"]
@@ -96,7 +97,7 @@ def test_normal_designs_have_their_closed_form_mean_and_covariance(options):
 
 
 @pytest.mark.parametrize("errors", ["t3", "contaminated"])
-def test_serial_correlation_keeps_contrasts_symmetric(errors: str):
+def test_serial_correlation_keeps_contrasts_symmetric(errors: Errors):
     change = np.diff(draw(Design(n=10, k=4, errors=errors, rho=0.7), DATASETS, seed=6))
     for x in (0.0, 0.5, 1.5):
         falls, rises = (change <= -x).mean(axis=(0, 1)), (change >= x).mean(axis=(0, 1))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import json
 import re
 from collections.abc import Mapping, Sequence
@@ -138,18 +139,16 @@ def record_lines(record: Mapping[str, Any], prefix: str = "") -> list[tuple[str,
     return lines
 
 
-def _inline(drawing: Drawing) -> Any:
+def _inline(drawing: Drawing) -> str:
     """Return a figure as an element of the page: named, scalable, its identifiers its own."""
-    import markupsafe
-
     svg = drawing.svg[drawing.svg.index("<svg") :]
     svg = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", svg, flags=re.DOTALL)
     svg = re.sub(r"<[^>]+>", lambda tag: _own_ids(tag[0], drawing.name), svg)
     svg = svg.replace(">*{", f">#figure-{drawing.name} *{{", 1)
     opening, rest = svg.split(">", 1)
     opening = re.sub(r'\s(?:width|height)="[^"]*"', "", opening)
-    label = markupsafe.escape(drawing.alt)
-    return markupsafe.Markup(f'{opening} role="img" aria-label="{label}">{rest.strip()}')
+    label = html.escape(drawing.alt)
+    return f'{opening} role="img" aria-label="{label}">{rest.strip()}'
 
 
 def _own_ids(tag: str, name: str) -> str:
