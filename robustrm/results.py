@@ -107,6 +107,9 @@ class Estimate(_Record):
         Unit of the value; None for a ratio or a probability.
     scale : {"raw", "log"}
         Scale of the analysis. On ``"log"`` the value and limits are back-transformed ratios.
+    no_change : float or None
+        The value that says "no change", such as a half of a probability of a fall. None: 0 on
+        the raw scale, 1 on the log scale.
     """
 
     name: str
@@ -117,6 +120,14 @@ class Estimate(_Record):
     kind: str
     unit: str | None = None
     scale: Scale = "raw"
+    no_change: float | None = None
+
+    @property
+    def neutral(self) -> float:
+        """The value that says "no change"."""
+        if self.no_change is not None:
+            return self.no_change
+        return 1.0 if self.scale == "log" else 0.0
 
     @classmethod
     def of_shift(

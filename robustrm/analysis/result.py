@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+from robustrm._format import Style
 from robustrm.ledger import Ledger
 from robustrm.methods.attainable import Attainable
 from robustrm.methods.effects import Effect
@@ -144,13 +145,15 @@ class Analysis:
 
         return document(self)
 
-    def write_report(self, folder: str | Path) -> Path:
+    def write_report(self, folder: str | Path, *, style: Style = "medical") -> Path:
         """Write the whole report into `folder`, which an earlier report there gives way to.
 
         Parameters
         ----------
         folder : str or Path
             Output folder; it appears whole or not at all.
+        style : {"medical", "apa"}, default "medical"
+            How p values are written.
 
         Returns
         -------
@@ -159,7 +162,7 @@ class Analysis:
         """
         from robustrm.report.folder import write_report
 
-        return write_report(self, folder)
+        return write_report(self, folder, style=style)
 
     def __str__(self) -> str:
         overall = [] if self.omnibus is None else [str(self.omnibus)]

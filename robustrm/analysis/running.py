@@ -17,7 +17,7 @@ from robustrm.analysis.result import ALL_OCCASIONS, Analysis, Inclusion, Row, Sk
 from robustrm.errors import DataError, TooFewError
 from robustrm.methods.attainable import attainable_of
 from robustrm.methods.effects import effect_sizes
-from robustrm.methods.follow_up import follow_up
+from robustrm.methods.follow_up import declared_pairs, follow_up
 from robustrm.methods.null_distribution import NullDistribution, null_distribution
 from robustrm.methods.registry import method as registered
 from robustrm.methods.summary import summarize
@@ -88,6 +88,7 @@ def analyze(
     settled = plan if plan is not None else Plan()
     root = _root(settled, rng)
     raw = table.in_natural_order()
+    declared_pairs(raw, settled.contrasts, "contrasts")  # refused before anything is computed
     scaled = raw.on_scale(settled.used_scale)
     steps = _Steps(progress, total=8)
 
@@ -267,11 +268,15 @@ def _beside(raw: OccasionTable, plan: Plan) -> tuple[tuple[Row, ...], tuple[Skip
         role: Role = "sensitivity" if scale == plan.used_scale else "supplementary"
         try:
             table = raw.on_scale(scale)
-            rows.append(_parametric_omnibus(table, role, plan))
-            rows.extend(_parametric_pairs(table, role, plan))
-        except (TooFewError, DataError) as error:
-            reason = error.problems[0].message if isinstance(error, DataError) else str(error)
+        except DataError as error:
+            reason = error.problems[0].message
             skips.append(Skip(f"parametric results ({scale} scale)", reason))
+            continue
+        try:
+            rows.append(_parametric_omnibus(table, role, plan))
+        except TooFewError as error:
+            skips.append(Skip(f"{registered('anova').title} ({scale} scale)", str(error)))
+        rows.extend(_parametric_pairs(table, role, plan))
     return tuple(rows), tuple(skips)
 
 

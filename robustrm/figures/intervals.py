@@ -30,8 +30,8 @@ def comparisons(follow_ups: FollowUps, *, ax: Axes | None = None) -> Axes:
     Returns
     -------
     Axes
-        Ratios on a log axis with a line at 1, differences with a line at 0; n and the
-        adjusted p value stand on the right.
+        Ratios on a log axis with a line at 1, differences with a line at 0, probabilities with
+        a line at a half; n and the adjusted p value stand on the right.
 
     Notes
     -----
@@ -40,15 +40,16 @@ def comparisons(follow_ups: FollowUps, *, ax: Axes | None = None) -> Axes:
     """
     estimates = [comparison.estimate for comparison in follow_ups]
     known = [estimate for estimate in estimates if estimate is not None]
-    logarithmic = any(comparison.result.scale == "log" for comparison in follow_ups)
+    logarithmic = any(estimate.scale == "log" for estimate in known)
+    neutral = known[0].neutral if known else 0.0
     with style.house():
         axes = style.axes_for(ax, (style.WIDTH, 1.25 + 0.36 * len(follow_ups)))
         if logarithmic:
             axes.set_xscale("log")
         axes.margins(x=0.08)
         axes.set_ylim(len(follow_ups) - 0.5, -0.5)
-        axes.axvline(1.0 if logarithmic else 0.0, color=style.QUIET, linewidth=1, zorder=1)
-        _set_range(axes, known, log=logarithmic)
+        axes.axvline(neutral, color=style.QUIET, linewidth=1, zorder=1)
+        _set_range(axes, known, neutral, log=logarithmic)
         for row, comparison in enumerate(follow_ups):
             _draw_row(axes, row, comparison)
         style.ticks(axes.xaxis, log=logarithmic)
@@ -60,9 +61,8 @@ def comparisons(follow_ups: FollowUps, *, ax: Axes | None = None) -> Axes:
     return axes
 
 
-def _set_range(axes: Axes, estimates: list[Estimate], *, log: bool) -> None:
+def _set_range(axes: Axes, estimates: list[Estimate], neutral: float, *, log: bool) -> None:
     """Show every estimate, every finite end and the line of no change, with a margin."""
-    neutral = 1.0 if log else 0.0
     ends = [neutral] + [
         end
         for estimate in estimates

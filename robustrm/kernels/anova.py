@@ -11,6 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
+from robustrm.kernels.contrasts import helmert
+
 Floats = NDArray[np.float64]
 
 
@@ -46,24 +48,14 @@ def contrast_covariance(y: Floats) -> Floats:
     """Return the covariance (..., k − 1, k − 1) of orthonormal contrasts of the occasions."""
     n = y.shape[-2]
     centred = y - y.mean(axis=-2, keepdims=True)
-    scores = centred @ orthonormal_contrasts(y.shape[-1]).T
+    scores = centred @ helmert(y.shape[-1]).T
     return np.asarray(np.swapaxes(scores, -1, -2) @ scores / (n - 1))
 
 
 def to_contrasts(covariance: Floats) -> Floats:
     """Return the covariance of orthonormal contrasts from that of the occasions (..., k, k)."""
-    basis = orthonormal_contrasts(covariance.shape[-1])
+    basis = helmert(covariance.shape[-1])
     return basis @ covariance @ basis.T
-
-
-def orthonormal_contrasts(k: int) -> Floats:
-    """Return (k − 1, k) orthonormal rows, each summing to zero (Helmert form)."""
-    rows = np.zeros((k - 1, k))
-    for i in range(1, k):
-        rows[i - 1, :i] = 1.0
-        rows[i - 1, i] = -i
-        rows[i - 1] /= np.sqrt(i * (i + 1))
-    return rows
 
 
 def epsilon_greenhouse_geisser(contrasts: Floats) -> Floats:

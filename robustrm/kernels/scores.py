@@ -55,8 +55,8 @@ def mean_scores(values: Floats) -> Floats:
 def winsorized_scores(centred: Floats, trim: float) -> Floats:
     """Return k times the centred values clipped at their pooled quantiles, centred again.
 
-    The clip points, the g-th smallest and largest of all nk values with g = ⌊trim · nk⌋, do
-    not depend on how a subject's values are arranged over the occasions.
+    The clip points pull in g = ⌊trim · nk⌋ of all nk values at each end; they do not depend
+    on how a subject's values are arranged over the occasions.
     """
     n, k = centred.shape[-2:]
     g = cut(n * k, trim)

@@ -111,6 +111,7 @@ def probability_of_fall(table: OccasionTable, first: str, second: str, *, level:
             high=float(high),
             level=level,
             kind="Clopper-Pearson",
+            no_change=0.5,
         ),
         remark=remark,
         n_subjects=moved.n,

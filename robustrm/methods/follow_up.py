@@ -160,11 +160,16 @@ def _tested_family(
     return comparisons, adjusted([smallest_p(c) for c in comparisons], adjust)
 
 
-def declared_pairs(table: OccasionTable, family: str | Sequence[Pair]) -> list[Pair]:
-    """Return the pairs (earlier, later) of a family, in the order of the table's occasions."""
+def declared_pairs(
+    table: OccasionTable, family: str | Sequence[Pair], argument: str = "family"
+) -> list[Pair]:
+    """Return the pairs (earlier, later) of a family, in the order of the table's occasions.
+
+    `argument` is the caller's name for it in messages.
+    """
     labels = table.occasions
     if isinstance(family, str):
-        check_choice("family", family, FAMILIES)
+        check_choice(argument, family, FAMILIES)
         if family == "first":
             return [(labels[0], label) for label in labels[1:]]
         if family == "successive":
@@ -172,12 +177,12 @@ def declared_pairs(table: OccasionTable, family: str | Sequence[Pair]) -> list[P
         return list(itertools.combinations(labels, 2))
     pairs = [tuple(pair) for pair in family]
     if not pairs or any(len(pair) != 2 for pair in pairs):
-        raise ArgumentError(f"`family` must hold pairs of two occasions, got {family!r}.")
+        raise ArgumentError(f"`{argument}` must hold pairs of two occasions, got {family!r}.")
     for pair in pairs:
         for label in pair:
-            check_member("family", label, labels)
+            check_member(argument, label, labels)
     if len({frozenset(pair) for pair in pairs}) < len(pairs) or any(a == b for a, b in pairs):
-        raise ArgumentError(f"`family` must hold different pairs, got {family!r}.")
+        raise ArgumentError(f"`{argument}` must hold different pairs, got {family!r}.")
     return [(a, b) for a, b in pairs]
 
 
@@ -268,7 +273,8 @@ def _notes(
 ) -> tuple[Note, ...]:
     m = len(comparisons)
     notes = []
-    if m > 1 and intervals == "separate" and adjust != "none":
+    has_interval = any(c.estimate is not None and c.estimate.low is not None for c in comparisons)
+    if m > 1 and has_interval and intervals == "separate" and adjust != "none":
         notes.append(
             Note(
                 "separate intervals",

@@ -363,8 +363,7 @@ def _estimate_notes(
 def _disagreement_note(core: _Core, estimate: Estimate, settings: _Settings) -> list[Note]:
     if settings.alternative != "two-sided" or estimate.low is None or estimate.high is None:
         return []
-    none = 1.0 if estimate.scale == "log" else 0.0
-    covers = estimate.low <= none <= estimate.high
+    covers = estimate.low <= estimate.neutral <= estimate.high
     p = core.null.tail.p_value
     if covers == (p > 1 - settings.level):
         return []

@@ -69,8 +69,8 @@ def winsorized_permutation(
 
     Notes
     -----
-    Each value less its subject's mean is clipped at the g-th smallest and largest of all nk
-    of them, g = ⌊trim · nk⌋, and centred again by subject. The clip points do not depend on
+    Of all nk values less their subject's means, the g = ⌊trim · nk⌋ outermost at each end are
+    pulled in to the next, and all are centred again by subject. The clip points do not depend on
     how a subject's values are arranged over the occasions, so the permutation p value is
     exact. The null is that of exchangeable occasions.
 

@@ -3,6 +3,9 @@
 The permutation tests of a data set share its rearrangements, which are drawn anew for every data
 set; so do the tests that mirror. Without ties Friedman's test, the signed-rank test and the sign
 test are looked up in their exact law. The pair tests compare the last occasion with the first.
+
+Simulated values are continuous, tied only where they are set to a limit. Equality is therefore that
+of floats; the methods, which see real tables, judge it in whole multiples of the reporting step.
 """
 
 from __future__ import annotations

@@ -10,6 +10,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
+from robustrm.kernels.contrasts import helmert
 from robustrm.kernels.null.tables import Array, ListedRow, Table, read_only, reduced
 
 Side = Literal["greater", "less", "two-sided"]
@@ -131,14 +132,6 @@ class Linear:
 
 
 Form = Quadratic | Linear
-
-
-def helmert(size: int) -> Array:
-    """Orthonormal basis of the contrasts of `size` occasions, (size - 1, size)."""
-    rows = np.tri(size - 1, size)
-    index = np.arange(1, size)
-    rows[index - 1, index] = -index
-    return np.asarray(rows / np.sqrt(index * (index + 1.0))[:, None])
 
 
 def centring(dimension: int, *, blocks: Iterable[Sequence[int]] | None = None) -> Quadratic:
