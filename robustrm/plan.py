@@ -70,7 +70,8 @@ class Plan:
     substitute : {"half", "root2", "limit"}
         What enters an estimate for a value below the limit; the range is shown beside.
     in_time : bool
-        Whether the occasions are ordered in time.
+        Whether the occasions are ordered in time; the row flip then stands beside the overall
+        test, from 8 complete subjects.
     purpose : {"exploratory", "confirmatory"}
         In an exploratory study (a pilot) estimates come first and p values are labelled.
     design : {"single-arm", "randomised-order"}

@@ -136,7 +136,9 @@ def test_what_too_few_subjects_leave_undone_is_listed_with_its_reason():
         "needs at least 1 subject with all 3 occasions, got none"
         in reasons["Friedman test (log scale)"]
     )
-    assert "parametric results (raw scale)" in reasons
+    assert "Within-subject analysis of variance (raw scale)" in reasons
+    pairs = [row for row in analysis.beside if row.result.method == "paired_t"]
+    assert {row.result.n_subjects for row in pairs} == {3, 1}
     assert [c.result.n_subjects for c in analysis.primary] == [3, 1]
 
 
@@ -256,7 +258,7 @@ def test_progress_is_told_step_by_step_to_the_end():
 
 def test_a_planned_occasion_that_the_table_has_not_is_refused():
     plan = rm.Plan(contrasts=(("week 0", "week 5"),))
-    with pytest.raises(rm.ArgumentError, match=r"`family` must name one of .*got 'week 5'"):
+    with pytest.raises(rm.ArgumentError, match=r"`contrasts` must name one of .*got 'week 5'"):
         rm.analyze(TABLE, plan)
 
 
