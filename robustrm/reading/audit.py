@@ -245,7 +245,8 @@ def jumps(table: OccasionTable) -> list[Note]:
     """
     measured = ~table.missing & ~table.censored & (table.values > 0)
     notes = []
-    for i, subject in enumerate(table.subjects):
+    for subject in table.ids:
+        i = table.subjects.index(subject)
         columns = np.flatnonzero(measured[i]).tolist()
         for j in columns:
             others = [float(table.values[i, other]) for other in columns if other != j]

@@ -22,6 +22,7 @@ from robustrm.ledger import CellCounts, Ledger, LedgerLine
 from robustrm.records import limits
 from robustrm.records.findings import Findings
 from robustrm.records.limits import Limit, Placed
+from robustrm.records.natural import natural_key
 from robustrm.records.record import Record, Written, missing_codes, read_cells, refusals
 from robustrm.records.replicates import How, Replicate, collapse, spread_notes
 from robustrm.results import Note
@@ -93,16 +94,36 @@ def arrange_written(
     source: str = "",
 ) -> tuple[Arranged, str]:
     """Return the arrays for `written` cells, and the decimal mark by which they were read."""
-    records, notes, used = read_cells(written, decimal=declared.decimal)
+    records, notes, used = read_cells(_in_order(written, occasions), decimal=declared.decimal)
     found.notes += notes
-    arranged = arrange(records, occasions=occasions, declared=declared, found=found, source=source)
+    arranged = arrange(
+        records,
+        occasions=occasions,
+        subjects=tuple(dict.fromkeys(cell.subject for cell in written)),
+        declared=declared,
+        found=found,
+        source=source,
+    )
     return arranged, used
+
+
+def _in_order(written: Sequence[Written], occasions: Sequence[str]) -> list[Written]:
+    """Return the cells by subject, occasion and text: what is said of them follows this order.
+
+    Notes and ledger then do not depend on how the rows or columns of the file were sorted.
+    """
+    place = {label: j for j, label in enumerate(occasions)}
+    return sorted(
+        written,
+        key=lambda w: (natural_key(w.subject), place.get(w.occasion, 0), str(w.text)),
+    )
 
 
 def arrange(
     records: Sequence[Record],
     *,
     occasions: Sequence[str],
+    subjects: Sequence[str] | None = None,
     declared: Declared | None = None,
     found: Findings | None = None,
     source: str = "",
@@ -112,9 +133,11 @@ def arrange(
     Parameters
     ----------
     records : sequence of Record
-        One a written cell; subjects keep the order in which they first appear.
+        One a written cell.
     occasions : sequence of str
         Labels in time order. A subject without a record on an occasion is missing there.
+    subjects : sequence of str, optional
+        Order of the subjects; that in which they first appear if not given.
     declared : Declared, optional
         What the user declared of the cells.
     found : Findings, optional
@@ -139,15 +162,16 @@ def arrange(
     lower = limits.declared_limits("below", declared.lower_limit, labels)
     upper = limits.declared_limits("above", declared.upper_limit, labels)
     _check_sides(lower, upper)
-    subjects = tuple(dict.fromkeys(record.subject for record in records))
-    placed, kept, stopped = _settled(records, subjects, labels, declared.replicates)
-    below = limits.settle("below", placed, lower, labels, len(subjects))
-    above = limits.settle("above", placed, upper, labels, len(subjects))
+    ids = tuple(dict.fromkeys(subjects or (record.subject for record in records)))
+    placed, kept, stopped = _settled(records, ids, labels, declared.replicates)
+    below = limits.settle("below", placed, lower, labels, len(ids))
+    above = limits.settle("above", placed, upper, labels, len(ids))
+    in_file_order = sorted(records, key=lambda record: record.row or 0)
     problems = [
-        *found.problems, *refusals(records), *missing_codes(records), *stopped,
+        *found.problems, *refusals(in_file_order), *missing_codes(in_file_order), *stopped,
         *below.problems, *above.problems,
     ]  # fmt: skip
-    if not subjects and not problems:
+    if not ids and not problems:
         problems.append(Problem("no rows", "there is no row with data.", "Check the file."))
     if problems:
         raise DataError(problems, source)
@@ -157,7 +181,7 @@ def arrange(
     lines = (
         *found.lines,
         *_missing_lines(placed),
-        *_absent_lines(placed, subjects, labels),
+        *_absent_lines(placed, ids, labels),
         *_replicate_lines(records, placed, declared.replicates),
         *below.lines,
         *above.lines,
@@ -167,7 +191,7 @@ def arrange(
         **grid.fields(),
         lower_limit=below.array,
         upper_limit=above.array,
-        subjects=subjects,
+        subjects=ids,
         occasions=labels,
         step=None if units is None else step,
         units=units,
@@ -324,7 +348,7 @@ def _absent_lines(
     here = {(p.i, p.j) for p in placed}
     absent = [
         f"{subject} at {label}"
-        for i, subject in enumerate(subjects)
+        for i, subject in sorted(enumerate(subjects), key=lambda item: natural_key(item[1]))
         for j, label in enumerate(labels)
         if (i, j) not in here
     ]

@@ -16,6 +16,7 @@ from robustrm.cells import clean
 from robustrm.errors import DataError, Problem
 from robustrm.ledger import LedgerLine
 from robustrm.records.findings import Findings
+from robustrm.records.natural import natural_key
 from robustrm.records.record import Written
 from robustrm.results import Note
 
@@ -287,9 +288,10 @@ def _identifiers(sheet: Sheet, subject: str, found: Findings, *, repeated: bool)
     for text, row in zip(raw, sheet.rows, strict=True):
         spellings[clean(text)].setdefault(text, row.number)
     clash = {name for name, seen in spellings.items() if name and len(seen) > 1}
-    for name in clash:
+    for name in sorted(clash, key=natural_key):
         _blank_clash(name, spellings[name], subject, found, repeated=repeated)
-    blanks = [t for t in dict.fromkeys(raw) if clean(t) and t != clean(t) and clean(t) not in clash]
+    padded = {text for text in raw if clean(text) != text and clean(text) not in {"", *clash}}
+    blanks = sorted(padded, key=natural_key)
     if blanks:
         shown = listing([repr(text) for text in blanks])
         found.notes.append(
@@ -301,10 +303,10 @@ def _identifiers(sheet: Sheet, subject: str, found: Findings, *, repeated: bool)
 def _blank_clash(
     name: str, seen: Mapping[str, int], subject: str, found: Findings, *, repeated: bool
 ) -> None:
-    shown = listing([f"{text!r} (row {row})" for text, row in seen.items()])
     if not repeated:
-        found.notes.append(_possible_duplicate(shown))
+        found.notes.append(_possible_duplicate(listing([repr(text) for text in sorted(seen)])))
         return
+    shown = listing([f"{text!r} (row {row})" for text, row in seen.items()])
     found.problems.append(
         Problem(
             "look-alike identifiers",
@@ -332,11 +334,11 @@ def _look_alikes(ids: Sequence[str]) -> list[tuple[str, ...]]:
     for name in ids:
         if name:
             groups[_likeness(name)][name] = None
-    return [
-        tuple(group)
+    return sorted(
+        tuple(sorted(group, key=natural_key))
         for group in groups.values()
         if len(group) > 1 and len({clean(name) for name in group}) > 1
-    ]
+    )
 
 
 def _likeness(name: str) -> str:

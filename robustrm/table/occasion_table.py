@@ -23,6 +23,7 @@ from robustrm.cells import clean
 from robustrm.errors import ArgumentError, DataError
 from robustrm.ledger import CellCounts, Ledger, LedgerLine
 from robustrm.records import Declared, Findings, Written, arrange_written, sheets
+from robustrm.records.natural import natural_key
 from robustrm.results import Note, Scale
 from robustrm.table.arrays import (
     ARRAYS,
@@ -40,7 +41,6 @@ from robustrm.table.limits import (
     substitute_factor,
     substituted_units,
 )
-from robustrm.table.natural import natural_key
 from robustrm.ties import Bools, Differences, Floats
 
 if TYPE_CHECKING:

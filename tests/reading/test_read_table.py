@@ -387,3 +387,26 @@ def test_a_true_course_is_not_flagged():
     data = b"id,w0,w2,w6\nP1,1,4,16\nP2,<0.3,5,5\n"
     table = read(data, subject="id", occasions=["w0", "w2", "w6"])
     assert "jump" not in [note.code for note in table.notes]
+
+
+def test_nothing_that_is_said_depends_on_how_the_file_is_sorted(tmp_path: Path):
+    """Rows and columns reversed: the same ledger and the same notes, digest and name apart."""
+    rows = [
+        ["id", "w0", "w1", "w2"], ["A", "1*", "2", "3"], ["b", "4*", "<0.3", "1"],
+        ["C", "5", "<0.3", "0.2"], ["D", "7", "ND", "missed"], ["E", "3", "30", "3"],
+        ["F", "3", "nd", "0.1"], ["G", "33", "2", "2"], ["H", "2", "NA", "4"],
+        ["p7", "1", "1", "1"], ["P7 ", "1", "2", "3"], ["c ", "1", "2", "4"],
+    ]  # fmt: skip
+    turned = [row[::-1] for row in [rows[0], *rows[:0:-1]]]
+    tables = []
+    for name, lines in (("as it is", rows), ("turned", turned)):
+        folder = tmp_path / name
+        folder.mkdir()
+        path = folder / "file.csv"
+        path.write_text("\n".join(",".join(line) for line in lines), encoding="utf-8")
+        tables.append(read_table(path, subject="id", occasions=["w0", "w1", "w2"]))
+    first, second = tables
+    assert first.notes
+    assert first.notes == second.notes
+    assert first.ledger == second.ledger
+    assert first.in_natural_order() == second.in_natural_order()

@@ -14,4 +14,5 @@ def natural_key(text: str) -> tuple[tuple[int, int | str], ...]:
     ['T1', 'T2', 'T10']
     """
     parts = re.split(r"(\d+)", text)
-    return tuple((0, int(part)) if part.isdecimal() else (1, part.casefold()) for part in parts)
+    key = tuple((0, int(part)) if part.isdecimal() else (1, part.casefold()) for part in parts)
+    return (*key, (2, text))  # "p7" and "P7" have an order too
