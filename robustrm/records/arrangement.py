@@ -225,7 +225,9 @@ def _settled(
         undeclared = how is None and len(group) > 1
         if any(r.cell.kind == "refused" for r in group) and not undeclared:
             continue  # a problem of its own already
-        result = collapse(group, how)
+        # a duplicate is told in the order of the file, replicates in that of their content
+        told = sorted(group, key=lambda record: record.row or 0) if undeclared else group
+        result = collapse(told, how)
         if result.problem is not None:
             problems.append(result.problem)
         if result.cell is not None:
