@@ -117,7 +117,7 @@ class Plan:
         if self.scale is not None:
             check_choice("scale", self.scale, ("raw", "log"))
         check_choice("direction", self.direction, ("greater", "less"))
-        check_choice("pair", self.pair, _pair_methods(self.adjust))
+        _check_pair(self.pair, self.adjust)
         check_choice("omnibus", self.omnibus, methods_for("omnibus"))
         check_level(self.level)
         if self.sides not in (1, 2) or isinstance(self.sides, bool):
@@ -134,6 +134,11 @@ class Plan:
         if self.scale is not None:
             return self.scale
         return "log" if self.marker_kind == "concentration" else "raw"
+
+    @property
+    def alpha(self) -> float:
+        """Level of the tests: one minus the confidence level, without float noise."""
+        return round(1 - self.level, 12)
 
     @property
     def alternative(self) -> Literal["two-sided", "greater", "less"]:
@@ -201,8 +206,14 @@ def methods_for(kind: str) -> tuple[str, ...]:
     return tuple(m.name for m in METHODS if m.kind == kind and not m.requires)
 
 
-def _pair_methods(adjust: str) -> tuple[str, ...]:
-    return CLOSED_METHODS if adjust == "closed" else methods_for("pair")
+def _check_pair(pair: str, adjust: str) -> None:
+    if adjust != "closed":
+        check_choice("pair", pair, methods_for("pair"))
+    elif pair not in CLOSED_METHODS:
+        raise ArgumentError(
+            f"`pair` must be {' or '.join(map(repr, CLOSED_METHODS))} with `adjust` 'closed', "
+            f"got {pair!r}: its scores are computed once from the whole table."
+        )
 
 
 def _refuse_unknown(values: Mapping[str, Any], error: type[ArgumentError | PlanError]) -> None:

@@ -432,3 +432,14 @@ def test_the_ledger_only_grows():
     assert Ledger().to_frame().columns.tolist() == [
         "step", "subject", "occasion", "cells", "what",
     ]  # fmt: skip
+
+
+def test_a_substitute_is_entered_once():
+    """Half of half a limit is nobody's rule: the same rule changes nothing, another is refused."""
+    table = table_of([[0.3, 0.8], [1.2, 0.9]], below=[[True, False], [False, False]])
+    halved = table.substitute("half")
+    assert halved.substitute("half") is halved
+    assert halved.units is not None
+    assert halved.units.tolist() == [[3, 16], [24, 18]]
+    with pytest.raises(ArgumentError, match=r"already entered as 0\.5 times the limit"):
+        halved.substitute("limit")

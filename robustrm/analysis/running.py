@@ -184,8 +184,7 @@ def _thresholds(table: OccasionTable, plan: Plan) -> tuple[float, ...]:
     k = table.n_occasions
     sizes = {"first": k - 1, "successive": k - 1, "all": k * (k - 1) // 2}
     m = sizes[plan.contrasts] if isinstance(plan.contrasts, str) else len(plan.contrasts)
-    alpha = 1 - plan.level
-    return tuple(alpha / i for i in range(1, m + 1))
+    return tuple(plan.alpha / i for i in range(1, m + 1))
 
 
 def _offered(plan: Plan, name: str, thresholds: Sequence[float], root: int) -> dict[str, Any]:
@@ -213,7 +212,7 @@ def _omnibus(
 
 
 def _overall(table: OccasionTable, plan: Plan, name: str, root: int) -> TestResult:
-    options = _offered(plan, name, (1 - plan.level,), root)
+    options = _offered(plan, name, (plan.alpha,), root)
     return registered(name).load()(table, **options)
 
 

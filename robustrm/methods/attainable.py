@@ -239,5 +239,5 @@ def attainable_of(family: FollowUps) -> Attainable:
         adjust=family.adjust,
         smallest_p=family.smallest_p,
         smallest_p_adjusted=family.smallest_p_adjusted,
-        alpha=1 - family.level,
+        alpha=round(1 - family.level, 12),
     )

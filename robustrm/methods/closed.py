@@ -198,13 +198,14 @@ def closed_comparison(
     p_holm: float,
     *,
     level: float,
+    substitute: str,
 ) -> Comparison:
     """Make the row of one pair: the sign flip of its values, with the closed p value.
 
     With aligned ranks the p values are those of the rank scores; estimate and interval stay
     those of the sign flip, which a note says.
     """
-    result = sign_flip(used, *pair, level=level)
+    result = sign_flip(used, *pair, level=level, substitute=substitute)
     result = replace(
         result,
         method=method,

@@ -242,7 +242,9 @@ def _closed_family(
     )
     p_holm = adjusted([test.raw.p_value for test in tests], "holm")
     comparisons = tuple(
-        closed_comparison(used, pair, method, test, holm, level=settings["level"])
+        closed_comparison(
+            used, pair, method, test, holm, level=settings["level"], substitute=substitute
+        )
         for pair, test, holm in zip(pairs, tests, p_holm, strict=True)
     )
     return comparisons, [test.smallest for test in tests]

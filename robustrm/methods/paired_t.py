@@ -10,6 +10,7 @@ from scipy import special
 
 from robustrm._checks import Alternative, check_alternative, check_level
 from robustrm.errors import TooFewError
+from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
 from robustrm.ties import power_of_two
@@ -85,7 +86,16 @@ def paired_t(
     constant = len(set(gaps.values.tolist())) == 1
     t = math.nan if constant else mean / error
     margin = float(special.stdtrit(n - 1, (1 + level) / 2)) * error
-    names = ("mean difference", "ratio of geometric means")
+    mostly_beyond = is_mostly_beyond(used)
+    estimate = Estimate.of_shift(
+        NAMES,
+        value=mean,
+        limits=None if constant else (mean - margin, mean + margin),
+        level=None if constant else level,
+        kind="t",
+        unit=used.unit,
+        scale=used.scale,
+    )
     return TestResult(
         method="paired_t",
         statistic=t,
@@ -100,22 +110,16 @@ def paired_t(
             if used.scale == "log"
             else "The mean difference is zero."
         ),
-        estimand=names[used.scale == "log"],
+        estimand=NAMES[used.scale == "log"],
         scale=used.scale,
         alternative=direction,
-        estimate=Estimate.of_shift(
-            names,
-            value=mean,
-            limits=None if constant else (mean - margin, mean + margin),
-            level=None if constant else level,
-            kind="t",
-            unit=used.unit,
-            scale=used.scale,
-        ),
+        estimate=None if mostly_beyond else estimate,
         subjects=used.ids,
-        notes=(_CONSTANT,) if constant else (),
+        notes=(*((_CONSTANT,) if constant else ()), *((MOSTLY_BEYOND,) if mostly_beyond else ())),
     )
 
+
+NAMES = ("mean difference", "ratio of geometric means")
 
 _CONSTANT = Note(
     "no variation",

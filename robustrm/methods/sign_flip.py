@@ -13,6 +13,7 @@ from robustrm.kernels import subset_means
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import sign_tables
 from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, complete_pair
+from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
 from robustrm.ties import Floats
@@ -108,16 +109,7 @@ def sign_flip(
     pair = test.used
     values = pair.paired(first, second)[0].values
     found = test.tail(NullOptions(null, draws, thresholds, rng))
-    limits, attained = _interval(values, level, rng)
-    estimate = Estimate.of_shift(
-        NAMES,
-        value=float(values.mean()),
-        unit=pair.unit,
-        scale=pair.scale,
-        kind="exact" if values.size <= subset_means.LARGEST else "random subsets",
-        limits=limits,
-        level=attained,
-    )
+    estimate = None if is_mostly_beyond(pair) else _estimate(values, pair, level, rng)
     return TestResult(
         method="sign_flip",
         statistic=test.observed_statistic,
@@ -151,14 +143,28 @@ def problem(
     """Return the test on a pair of occasions: a subject's score is plus or minus its difference."""
     pair = complete_pair(table, first, second, "The sign flip").substitute(substitute)
     gaps, _ = pair.paired(first, second)
-    mean, line = float(gaps.values.mean()), float(gaps.scores.sum())
     # from sums of scores (steps of the data, or logs) to means in the unit of the values
-    factor = mean / line if line else 1 / gaps.values.size
+    widest = int(np.argmax(np.abs(gaps.scores)))
+    unit = float(gaps.values[widest] / gaps.scores[widest]) if gaps.scores.any() else 1.0
+    factor = unit / gaps.values.size
     form = linear(1.0, side=check_alternative(alternative))
     tables = sign_tables(gaps.scores)
     symbol = "mean log ratio" if pair.scale == "log" else "mean difference"
     return AdditiveProblem(
         pair, gaps.scores, tables, form, lambda t: np.asarray(factor * t), symbol
+    )
+
+
+def _estimate(values: Floats, pair: OccasionTable, level: float, rng: Rng) -> Estimate:
+    limits, attained = _interval(values, level, rng)
+    return Estimate.of_shift(
+        NAMES,
+        value=float(values.mean()),
+        unit=pair.unit,
+        scale=pair.scale,
+        kind="exact" if values.size <= subset_means.LARGEST else "random subsets",
+        limits=limits,
+        level=attained,
     )
 
 
@@ -187,7 +193,9 @@ def _p_normal(scores: Floats) -> float:
     return float(2 * special.ndtr(-abs(scores.sum()) / deviation)) if deviation else 1.0
 
 
-def _no_interval(estimate: Estimate, n: int, level: float) -> tuple[Note, ...]:
+def _no_interval(estimate: Estimate | None, n: int, level: float) -> tuple[Note, ...]:
+    if estimate is None:
+        return (MOSTLY_BEYOND,)
     if estimate.low is not None:
         return ()
     return (

@@ -23,6 +23,7 @@ from robustrm.methods.additive import (
     Rng,
     complete_pair,
 )
+from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
 from robustrm.ties import Differences, Floats
@@ -141,7 +142,7 @@ def signed_rank(
     settings = _Settings(direction, zeros, level, NullOptions(null, draws, thresholds, rng))
     core = _core(pair, settings, substitute)
     spread = _over_substitutes(pair, settings)
-    mostly_beyond = bool((pair.censored.sum(axis=0) * 2 > n).any())
+    mostly_beyond = is_mostly_beyond(pair)
     estimate = None if mostly_beyond else _estimate(core, level, pair)
     return TestResult(
         method="signed_rank",
@@ -341,13 +342,7 @@ def _estimate_notes(
 ) -> list[Note]:
     n = core.n
     if mostly_beyond:
-        return [
-            Note(
-                "mostly beyond the limit",
-                "More than half of the values of an occasion lie beyond a limit.",
-                "No shift is estimated; the counts of falls and rises stand instead.",
-            )
-        ]
+        return [MOSTLY_BEYOND]
     if estimate is None or estimate.low is None:
         return [
             Note(

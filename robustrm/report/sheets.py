@@ -168,7 +168,7 @@ def beside_contrasts_sheet(document: Document, style: Style = "medical") -> Shee
     for row in all_rows(document):
         if row["result"]["n_occasions"] == 2 and row["label"] != ALL:
             result = row["result"]
-            numbers = (*_estimate(result["estimate"], style), p_cell(result["p_value"], style))
+            numbers = (*_told(result["estimate"], style), p_cell(result["p_value"], style))
             cells = (*_who(row), *numbers, _adjusted(row, style), _differs(row))
             groups.setdefault(row["label"], []).append(Line(cells, _is_apart(row)))
     return Sheet(
@@ -243,6 +243,13 @@ def _estimate(estimate: Mapping[str, Any] | None, style: Style) -> tuple[str, st
         return bounded(estimate["value"], style), interval
     unit = f" {estimate['unit']}" if estimate["unit"] else ""
     return f"{number(estimate['value'])}{unit}", span(estimate["low"], estimate["high"])
+
+
+def _told(estimate: Mapping[str, Any] | None, style: Style) -> tuple[str, str]:
+    """Return an estimate for a column of shifts, where a probability says that it is one."""
+    value, interval = _estimate(estimate, style)
+    is_fall = estimate is not None and estimate["name"] == "probability of a fall"
+    return (f"{value} (fall)" if is_fall else value), interval
 
 
 def _level(estimate: Mapping[str, Any] | None) -> str:

@@ -113,6 +113,8 @@ class OccasionTable:
         Reporting step in raw units, exactly; None for derived values.
     units : array (n, k) of int or None
         Raw values as whole multiples of the step, from which equality is judged.
+    entered : Fraction, float or None
+        Share of the limit that entered for values below it; None while they hold the limit.
     replicates : tuple of Replicate
         Spread of declared replicates, one entry a subject and occasion.
     notes : tuple of Note
@@ -136,6 +138,7 @@ class OccasionTable:
     scale: Scale = "raw"
     step: Fraction | None = None
     units: NDArray[np.int64] | None = None
+    entered: float | Fraction | None = None
     replicates: tuple[Replicate, ...] = ()
     notes: tuple[Note, ...] = ()
     source: Mapping[str, Any] = field(default_factory=dict)
@@ -586,10 +589,21 @@ class OccasionTable:
         OccasionTable
             The cells stay marked as below. A substitute is a convention, not a measurement:
             show how the answer moves when it moves.
+
+        Raises
+        ------
+        ArgumentError
+            When the rule is not known, or another one was applied before.
         """
         factor, words = substitute_factor(rule)
-        if not self.below.any():
+        if not self.below.any() or self.entered == factor:
             return self
+        if self.entered is not None:
+            raise ArgumentError(
+                f"`substitute` must be given once, got {rule!r} for a table whose values below "
+                f"the limit already entered as {float(self.entered):.3g} times the limit. Start "
+                "from the table before."
+            )
         raised = math.log(factor) if self.scale == "log" else 0.0
         filled = self.lower_limit + raised if raised else self.lower_limit * float(factor)
         step, units = substituted_units(self, factor)
@@ -604,6 +618,7 @@ class OccasionTable:
             values=np.where(self.below, filled, self.values),
             units=units,
             step=step,
+            entered=factor,
             ledger=self.ledger.add(line),
         )
 

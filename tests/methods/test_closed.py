@@ -192,3 +192,16 @@ def test_more_than_six_occasions_are_refused():
     table = OccasionTable.from_array([list(range(7))] * 3, occasions=[f"w{j}" for j in range(7)])
     with pytest.raises(ArgumentError, match="at most 6 occasions, got 7"):
         follow_up(table, method="sign_flip", adjust="closed")
+
+
+def test_the_declared_substitute_enters_everywhere():
+    """With '<0.3' entered as the limit, the table is that of plain values 0.3, marked below."""
+    rows = [[0.3, 0.8, 1.9], [1.2, 0.9, 2.5], [0.7, 0.3, 0.8], [2.2, 1.4, 3.1], [0.9, 0.8, 1.7]]
+    marks = [[(j == 0 and i == 0) or (j == 1 and i == 2) for j in range(3)] for i in range(5)]
+    marked = OccasionTable.from_array(rows, occasions=LABELS[:3], below=marks)
+    options = {"substitute": "limit"}
+    censored = follow_up(marked, method="sign_flip", adjust="closed", options=options)
+    plain = follow_up(table_of(rows), method="sign_flip", adjust="closed")
+    for one, other in zip(censored, plain, strict=True):
+        assert one.p_adjusted == other.p_adjusted
+        assert one.estimate == other.estimate
