@@ -388,7 +388,8 @@ class FollowUps(_Record):
         for comparison in self.comparisons:
             if (comparison.first, comparison.second) == tuple(pair):
                 return comparison
-        raise KeyError(pair)
+        known = ", ".join(repr((c.first, c.second)) for c in self.comparisons)
+        raise KeyError(f"no comparison {tuple(pair)!r}; the family has {known}")
 
     def __str__(self) -> str:
         headings = ["comparison", "n", "estimate", "interval", "P", f"P ({self.adjust})"]

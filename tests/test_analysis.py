@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from importlib.resources import files
 
 import numpy as np
 import pytest
@@ -276,3 +277,33 @@ def test_the_table_of_an_analysis_is_raw_and_in_natural_order():
     assert analysis.table.subjects == ("P1", "P2", "P3", "P4", "P9", "P10", "P20", "P30")
     assert analysis.table.scale == "raw"
     assert analysis.scale == "log"
+
+
+# ── what a first user meets ───────────────────────────────────────────────────────────────────
+
+
+def test_a_pair_against_time_is_refused_with_the_right_order():
+    plan = rm.Plan(contrasts=(("week 6", "week 0"),), sides=1, direction="less")
+    with pytest.raises(rm.ArgumentError, match=r"Did you mean \('week 0', 'week 6'\)\?"):
+        rm.analyze(TABLE, plan)
+    unordered = rm.analyze(TABLE, plan.replace(in_time=False)).primary
+    assert unordered["week 6", "week 0"].label == "week 0 vs week 6"
+
+
+def test_another_kind_of_plan_or_table_is_refused():
+    with pytest.raises(rm.ArgumentError, match="`plan` a Plan, got OccasionTable and dict"):
+        rm.analyze(TABLE, {"adjust": "holm"})  # type: ignore[arg-type]
+
+
+def test_the_adjusted_p_is_followed_over_the_substitutes():
+    """On the demo Holm's P of week 12 crosses .05 while the unadjusted P stays below."""
+    path = str(files("robustrm.demo") / "calprotectin.csv")
+    weeks = ["week 0", "week 2", "week 6", "week 12"]
+    family = rm.analyze(rm.read_table(path, subject="patient", occasions=weeks)).primary
+    spread = family["week 0", "week 12"].result.details["substitutes"]
+    assert spread["p_value"][1] <= 0.05 < spread["p_adjusted"][1]
+    assert spread["reading"] == "changes"
+    (note,) = [note for note in family.notes if note.code == "substitutes, adjusted"]
+    assert note.consequence == "The reading depends on the substitute for week 12 vs week 0."
+    # by hand: Holm multiplies the smallest of three p values by 3
+    assert spread["p_adjusted"][0] == pytest.approx(3 * spread["p_value"][0])

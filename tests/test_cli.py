@@ -522,3 +522,30 @@ def test_methods_does_not_know_every_name():
     result = run("methods", "freidman")
     assert result.exit_code == 2
     assert "got 'freidman'. Did you mean 'friedman'?" in result.stderr
+
+
+def test_a_direction_without_one_side_is_refused(tmp_path: Path):
+    path = tmp_path / "a.csv"
+    path.write_text("id,a,b\nX,1,2\nY,2,3\n", encoding="utf-8")
+    options = ["--subject", "id", "--occasions", "a,b", "--direction", "less"]
+    result = CliRunner().invoke(main, ["analyze", str(path), *options])
+    assert result.exit_code == 2
+    assert "Add --sides 1" in result.stderr
+
+
+def test_closed_testing_takes_aligned_ranks_from_the_command_line(tmp_path: Path):
+    path = tmp_path / "a.csv"
+    path.write_text("id,a,b,c\nX,1,2,4\nY,2,3,9\nZ,3,7,8\n", encoding="utf-8")
+    options = [
+        "--subject",
+        "id",
+        "--occasions",
+        "a,b,c",
+        "--adjust",
+        "closed",
+        "--pair",
+        "aligned_ranks",
+    ]
+    result = CliRunner().invoke(main, ["analyze", str(path), *options])
+    assert result.exit_code == 0, result.stderr
+    assert "P, closed" in result.stdout

@@ -20,7 +20,7 @@ def analysis_notes(
     candidates = (
         _exploratory_note(plan),
         _design_note(plan),
-        _missing_note(table),
+        _missing_note(table, plan),
         _limit_note(table, plan),
         _spread_note(summary),
     )
@@ -50,7 +50,7 @@ def _design_note(plan: Plan) -> Note | None:
     )
 
 
-def _missing_note(table: OccasionTable) -> Note | None:
+def _missing_note(table: OccasionTable, plan: Plan) -> Note | None:
     incomplete = np.flatnonzero(table.missing.any(axis=1)).tolist()
     if not incomplete:
         return None
@@ -59,7 +59,9 @@ def _missing_note(table: OccasionTable) -> Note | None:
     return Note(
         "missing occasions",
         f"{count} of {table.n_subjects} without all occasions: {who}.",
-        "Not in the tests that need all occasions; each comparison uses all who have both.",
+        "Left out of every comparison and test, which here need all occasions."
+        if plan.adjust == "closed"
+        else "Not in the tests that need all occasions; each comparison uses all who have both.",
         "Ask whether the reason for the gap has to do with the value that is missing.",
     )
 
@@ -79,7 +81,8 @@ def _limit_note(table: OccasionTable, plan: Plan) -> Note | None:
         counts,
         f"Ranked beyond all measured values; below the limit entered as "
         f"{_SUBSTITUTE_WORDS[plan.substitute]} where a size is needed.",
-        "The range over other substitutes is given with each estimate that depends on it.",
+        "The range over other substitutes stands with the signed-rank comparisons; means, t and F "
+        "take this one alone.",
     )
 
 

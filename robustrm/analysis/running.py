@@ -14,7 +14,7 @@ import numpy as np
 
 from robustrm.analysis.notes import analysis_notes
 from robustrm.analysis.result import ALL_OCCASIONS, Analysis, Inclusion, Row, Skip
-from robustrm.errors import DataError, TooFewError
+from robustrm.errors import ArgumentError, DataError, TooFewError
 from robustrm.methods.attainable import attainable_of
 from robustrm.methods.effects import effect_sizes
 from robustrm.methods.follow_up import declared_pairs, follow_up
@@ -86,9 +86,10 @@ def analyze(
     (0.0625, False)
     """
     settled = plan if plan is not None else Plan()
+    _check_kinds(table, settled)
     root = _root(settled, rng)
     raw = table.in_natural_order()
-    declared_pairs(raw, settled.contrasts, "contrasts")  # refused before anything is computed
+    _check_contrasts(raw, settled)
     scaled = raw.on_scale(settled.used_scale)
     steps = _Steps(progress, total=8)
 
@@ -126,6 +127,24 @@ def analyze(
     )
     steps.done()
     return dataclasses.replace(analysis, inclusions=_inclusions(analysis))
+
+
+def _check_kinds(table: object, plan: object) -> None:
+    if not isinstance(table, OccasionTable) or not isinstance(plan, Plan):
+        raise ArgumentError(
+            f"`table` must be an OccasionTable and `plan` a Plan, got {type(table).__name__} and "
+            f"{type(plan).__name__}. Make the table with read_table or OccasionTable.from_wide."
+        )
+
+
+def _check_contrasts(table: OccasionTable, plan: Plan) -> None:
+    """Refuse unknown occasions, and pairs that run against time, before anything is computed."""
+    for first, second in declared_pairs(table, plan.contrasts, "contrasts"):
+        if plan.in_time and table.occasions.index(first) > table.occasions.index(second):
+            raise ArgumentError(
+                f"`contrasts` must name the earlier occasion first, got {(first, second)!r}. "
+                f"Did you mean {(second, first)!r}?"
+            )
 
 
 class _Steps:

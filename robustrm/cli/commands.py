@@ -264,9 +264,6 @@ def _kind_text(kind: str, title: str) -> str:
 
 
 def _entry_text(method: Method, width: int) -> str:
-    null = "each subject's occasions are exchangeable"
-    if not method.exchangeable:
-        null = f"see robustrm methods {method.name}"
-    said = f"{method.question} Null hypothesis: {null}."
+    said = f"{method.question} Null hypothesis: {method.null}."
     lines = textwrap.wrap(said, 74, break_on_hyphens=False)
     return "\n      ".join([f"  {method.name.ljust(width)}  {method.title}", *lines])

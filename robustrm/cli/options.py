@@ -13,7 +13,8 @@ from typing import Any
 
 import click
 
-from robustrm.methods.registry import ADJUSTMENTS
+from robustrm.errors import ArgumentError
+from robustrm.methods.registry import ADJUSTMENTS, CLOSED_METHODS
 from robustrm.plan import Plan, methods_for
 from robustrm.reading import read_table
 from robustrm.table import OccasionTable
@@ -198,7 +199,9 @@ def _usual(default: Any) -> str:
 
 def _plan_type(name: str) -> Any:
     """Return the type of an option, as the plan declares its key."""
-    if name in ("pair", "omnibus"):
+    if name == "pair":
+        return click.Choice(tuple(dict.fromkeys((*methods_for(name), *CLOSED_METHODS))))
+    if name == "omnibus":
         return click.Choice(methods_for(name))
     if name == "adjust":
         return click.Choice(ADJUSTMENTS)
@@ -230,7 +233,13 @@ def plan_of(plan_file: str | None, options: Mapping[str, Any]) -> Plan:
     changes = {key: options[key] for key in PLAN_OPTIONS if options.get(key) not in (None, ())}
     if "contrasts" in changes:
         changes["contrasts"] = _family(changes["contrasts"])
-    return plan.replace(**changes)
+    plan = plan.replace(**changes)
+    if "direction" in changes and plan.sides == 2:
+        raise ArgumentError(
+            f"`--direction` is for one-sided tests, got {changes['direction']!r} with two sides. "
+            "Add --sides 1, or leave the direction out."
+        )
+    return plan
 
 
 def _family(given: Sequence[tuple[str, ...]]) -> str | Sequence[tuple[str, ...]]:

@@ -53,12 +53,14 @@ def null_law(null: NullDistribution, *, ax: Axes | None = None) -> Axes:
         axes.axvline(null.observed, color=style.INK, linewidth=1.2, linestyle="--", zorder=3)
         axes.set_ylim(bottom=0)
         axes.set_xlim(*_view(null, width))
+        left = null.observed < sum(axes.get_xlim()) / 2
         axes.annotate(
             f"observed {number(null.observed, 4)}",
             (null.observed, 1),
             xycoords=axes.get_xaxis_transform(),
-            xytext=(4, -2),
+            xytext=(4 if left else -4, -2),
             textcoords="offset points",
+            ha="left" if left else "right",
             va="top",
             fontsize=style.SMALL,
         )

@@ -147,6 +147,8 @@ def _rank_biserial(comparison: Comparison) -> Effect:
             None,
             None,
             "point estimate",
+            scale=comparison.result.scale,
+            no_change=0.0,
         ),
         remark=(
             "−1 when all fell, 1 when all rose; "

@@ -5,13 +5,14 @@ from __future__ import annotations
 import itertools
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 from zlib import crc32
 
 import numpy as np
 
 from robustrm._checks import check_choice, check_draws, check_level, check_member
-from robustrm._format import counted, level_text, number
+from robustrm._format import counted, level_text, listing, number
 from robustrm.errors import ArgumentError, TooFewError
 from robustrm.methods.additive import Rng, complete_rows
 from robustrm.methods.adjusting import TITLES, adjusted
@@ -152,12 +153,51 @@ def _tested_family(
 ) -> tuple[tuple[Comparison, ...], list[float]]:
     results = [_tested(table, pair, method, settings, _stream(root, pair)) for pair in pairs]
     p_adjusted = adjusted([result.p_value for result in results], adjust)
+    alpha = max(settings.get("thresholds", (0.05,)))
+    results = _over_substitutes(results, p_adjusted, adjust, alpha)
     comparisons = tuple(
         Comparison(*pair, result, p)
         for pair, result, p in zip(pairs, results, p_adjusted, strict=True)
     )
     # the most favourable outcome has all comparisons at their smallest together
     return comparisons, adjusted([smallest_p(c) for c in comparisons], adjust)
+
+
+def _over_substitutes(
+    results: list[TestResult], p_adjusted: list[float], adjust: str, alpha: float
+) -> list[TestResult]:
+    """Add the range of the adjusted p over substitutes that enter in all comparisons alike."""
+    spreads = [result.details.get("substitutes") for result in results]
+    fractions = next((spread["fractions"] for spread in spreads if spread), ())
+    if not fractions:
+        return results
+    by_fraction = [
+        adjusted(
+            [
+                spread["p_values"][i] if spread else result.p_value
+                for spread, result in zip(spreads, results, strict=True)
+            ],
+            adjust,
+        )
+        for i in range(len(fractions))
+    ]
+    ranges = [(min(ps), max(ps)) for ps in zip(*by_fraction, p_adjusted, strict=True)]
+    return [
+        result
+        if spread is None
+        else replace(
+            result,
+            details={
+                **result.details,
+                "substitutes": {
+                    **spread,
+                    "p_adjusted": (low, high),
+                    "reading": "changes" if low <= alpha < high else spread["reading"],
+                },
+            },
+        )
+        for result, spread, (low, high) in zip(results, spreads, ranges, strict=True)
+    ]
 
 
 def declared_pairs(
@@ -270,6 +310,27 @@ def _not_estimable(table: OccasionTable, pair: Pair, method: str, reason: str) -
     )
 
 
+def _substitutes_note(comparisons: Sequence[Comparison], adjust: str) -> list[Note]:
+    told = [(c, c.result.details.get("substitutes", {})) for c in comparisons]
+    ranges = [(c.label, s["p_adjusted"], s["reading"]) for c, s in told if "p_adjusted" in s]
+    if not ranges or adjust == "none" or len(comparisons) == 1:
+        return []
+    shown = "; ".join(
+        f"{label} {number(low)}" + ("" if number(low) == number(high) else f" to {number(high)}")
+        for label, (low, high), _ in ranges
+    )
+    crossing = [label for label, _, reading in ranges if reading == "changes"]
+    return [
+        Note(
+            "substitutes, adjusted",
+            f"Over the same substitutes the P values after {TITLES[adjust]} are: {shown}.",
+            f"The reading depends on the substitute for {listing(crossing)}."
+            if crossing
+            else "No reading depends on the substitute.",
+        )
+    ]
+
+
 def _notes(
     comparisons: Sequence[Comparison], adjust: str, intervals: str, level: float
 ) -> tuple[Note, ...]:
@@ -283,7 +344,7 @@ def _notes(
                 f"The intervals hold {level_text(level)} each and are not adjusted for "
                 f"{counted(m, 'comparison')}; the p values are, after {TITLES[adjust]}.",
                 "An interval may exclude no change where the adjusted p value does not.",
-                "Choose simultaneous intervals to have both alike.",
+                "Simultaneous intervals with Bonferroni-adjusted P have both alike.",
             )
         )
     if m > 1 and intervals == "simultaneous":
@@ -292,8 +353,13 @@ def _notes(
                 "simultaneous intervals",
                 f"The {m} intervals hold {level_text(level)} together: each is made at level "
                 f"{number(1 - (1 - level) / m, 5)} (Bonferroni).",
+                ""
+                if adjust == "bonferroni"
+                else "They go with Bonferroni-adjusted P: another adjusted P can fall below the "
+                "level where the interval includes no change.",
             )
         )
+    notes.extend(_substitutes_note(comparisons, adjust))
     sizes = sorted({c.result.n_subjects for c in comparisons})
     if len(sizes) > 1:
         notes.append(

@@ -36,6 +36,8 @@ class Method:
         Usual name of the method.
     question : str
         The question it answers, as a sentence.
+    null : str
+        The null hypothesis in words.
     uses : {"values", "ranks"}
         What of the data it uses: results by ranks do not change under any monotone transform.
     exchangeable : bool
@@ -51,6 +53,7 @@ class Method:
     kind: Kind
     title: str
     question: str
+    null: str
     uses: Literal["values", "ranks"]
     exchangeable: bool
     options: tuple[str, ...]
@@ -71,6 +74,7 @@ class Method:
         return "null" in self.options
 
 
+_ORDERS = "every order of a subject's values over the occasions is equally likely"
 _NULL = ("null", "draws", "thresholds", "rng")
 
 METHODS: tuple[Method, ...] = (
@@ -79,6 +83,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Friedman test",
         "Do the occasions tend to rank alike within subjects?",
+        _ORDERS,
         "ranks",
         True,
         _NULL,
@@ -88,6 +93,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Quade test",
         "Do the occasions rank alike, weighted by how much each subject varies?",
+        _ORDERS,
         "values",
         True,
         ("substitute", *_NULL),
@@ -97,6 +103,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Aligned-ranks test",
         "Do the occasions differ, by ranks of the subject-centred values?",
+        _ORDERS,
         "values",
         True,
         ("substitute", *_NULL),
@@ -106,6 +113,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Normal-scores test",
         "Do the occasions rank alike within subjects, extreme ranks weighted?",
+        _ORDERS,
         "ranks",
         True,
         _NULL,
@@ -115,6 +123,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Permutation F test",
         "Do the occasion means differ, by permuting values within subjects?",
+        _ORDERS,
         "values",
         True,
         ("substitute", *_NULL),
@@ -124,6 +133,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Winsorized permutation test",
         "Do the occasions differ, with extreme subject-centred values pulled in?",
+        _ORDERS,
         "values",
         True,
         ("trim", "substitute", *_NULL),
@@ -133,6 +143,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Whole-row sign flip",
         "Do the occasions differ, whatever their spread and correlation?",
+        "every subject's contrasts are symmetric about zero, whatever their covariance",
         "values",
         False,
         ("substitute", *_NULL),
@@ -142,6 +153,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Skillings-Mack test",
         "Do the occasions rank alike within subjects, some visits missing?",
+        _ORDERS + ", and visits are missing for unrelated reasons",
         "ranks",
         True,
         _NULL,
@@ -151,6 +163,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Page trend test",
         "Do the values rise over the occasions in a stated order?",
+        _ORDERS,
         "ranks",
         True,
         ("order", "scores", "alternative", *_NULL),
@@ -161,6 +174,7 @@ METHODS: tuple[Method, ...] = (
         "omnibus",
         "Within-subject analysis of variance",
         "Do the occasion means differ, under a normal model?",
+        "the occasions have equal means",
         "values",
         False,
         ("substitute",),
@@ -170,6 +184,7 @@ METHODS: tuple[Method, ...] = (
         "pair",
         "Wilcoxon signed-rank test",
         "Did the values shift between two occasions, by direction and size?",
+        "the differences are symmetric about zero",
         "values",
         True,
         ("alternative", "zeros", "substitute", "level", *_NULL),
@@ -179,6 +194,7 @@ METHODS: tuple[Method, ...] = (
         "pair",
         "Sign test",
         "Do more subjects rise than fall between two occasions?",
+        "a rise and a fall are equally likely",
         "ranks",
         True,
         ("alternative", "level", *_NULL),
@@ -188,6 +204,7 @@ METHODS: tuple[Method, ...] = (
         "pair",
         "Sign-flip test",
         "Did the mean change between two occasions, by flipping signs?",
+        "the differences are symmetric about zero",
         "values",
         True,
         ("alternative", "substitute", "level", *_NULL),
@@ -197,6 +214,7 @@ METHODS: tuple[Method, ...] = (
         "pair",
         "Paired t test",
         "Does the mean difference between two occasions differ from zero, under a normal model?",
+        "the mean difference is zero",
         "values",
         False,
         ("alternative", "substitute", "level"),

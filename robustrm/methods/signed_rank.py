@@ -312,6 +312,7 @@ def _over_substitutes(pair: OccasionTable, settings: _Settings) -> dict[str, Any
         "fractions": FRACTIONS,
         "estimate": (min(centres), max(centres)),
         "p_value": (min(p_values), max(p_values)),
+        "p_values": tuple(p_values),
         "reading": "unchanged" if len(readings) == 1 else "changes",
     }
 
@@ -383,7 +384,9 @@ def _substitute_notes(spread: dict[str, Any] | None, estimate: Estimate | None) 
             "substitutes",
             f"With substitutes from {percent(FRACTIONS[0])} of the limit to the limit: {moved}"
             f"P {_range(*spread['p_value'])}.",
-            f"The reading {'is ' if spread['reading'] == 'unchanged' else ''}{spread['reading']}.",
+            "Before adjustment P stays on its side of the level and the direction holds."
+            if spread["reading"] == "unchanged"
+            else "Before adjustment P crosses the level, or the direction turns.",
         )
     ]
 

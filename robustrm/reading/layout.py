@@ -234,6 +234,17 @@ def _fitted(row: Row, width: int, source: str, found: Findings) -> Row:
                 text=extra[0].text,
             )
         )
+    filled = [cell.text for cell in row.fields if not cell.blank]
+    if width > 2 and len(filled) == 1 and filled[0].count(";") + filled[0].count("\t") > 1:
+        found.problems.append(
+            Problem(
+                "too few fields",
+                f"the row has one field under {width} headings, with other separators in it.",
+                "Write the whole file with one separator.",
+                row.number,
+                text=filled[0],
+            )
+        )
     fields = row.fields[:width]
     return Row(row.number, fields + (Field(),) * (width - len(fields)))
 

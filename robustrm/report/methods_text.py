@@ -173,15 +173,19 @@ def _limits_rule(document: Document) -> str:
     if not any(s["n_below"] + s["n_above"] for s in document["summary"]):
         return ""
     rule = SUBSTITUTES[document["plan"]["substitute"]]
+    repeated = ", and the signed-rank comparisons were repeated with other substitutes"
     return (
         "Values beyond a limit were ranked beyond all measured ones; where a size was needed, "
-        f"{rule} entered for a value below it, and estimates were repeated with other substitutes."
+        f"{rule} entered for a value below it"
+        f"{repeated if document['plan']['pair'] == 'signed_rank' else ''}."
     )
 
 
 def _missing_rule(document: Document) -> str:
     if document["study"]["n_complete"] == document["study"]["n_subjects"]:
         return ""
+    if document["plan"]["adjust"] == "closed":
+        return "Planned comparisons use the subjects with every occasion; no value was filled in."
     return (
         "Each comparison uses all subjects with both occasions, overall tests those with every "
         "occasion; no value was filled in."

@@ -161,6 +161,10 @@ def _substitutes_found(document: Document, style: Style) -> str:
             verb = "is unchanged" if spread["reading"] == "unchanged" else "changes"
             low, high = spread["p_value"]
             p_values = p_range(low, high, style)
+            name = adjustment(document["primary"])
+            if name is not None and "p_adjusted" in spread:
+                lowest, highest = spread["p_adjusted"]
+                p_values += f", {name}-adjusted {p_range(lowest, highest, style)}"
             parts.append(f"{row['label']}: {moved}{p_values}, the reading {verb}")
     if not parts:
         return ""

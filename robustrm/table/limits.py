@@ -121,7 +121,7 @@ def not_positive(table: OccasionTable, i: int, j: int) -> Problem:
             "declare the limit; if it is a true zero, analyze on the raw scale (--scale raw)."
         ),
         column=table.occasions[j],
-        text=number(float(table.values[i, j])),
+        text=f"{table.values[i, j]:g}",
     )
 
 

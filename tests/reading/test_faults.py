@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import io
 from dataclasses import dataclass, field
+from pathlib import Path
 
 import pytest
 
@@ -490,3 +491,13 @@ def test_personal_details_do_not_reach_the_table(personal: str):
     table = read(fault)
     held = repr(table) + str(table.to_long()) + str(table.ledger.to_dict()) + str(table.source)
     assert personal not in held
+
+
+def test_rows_with_another_separator_than_the_headings_are_refused(tmp_path: Path):
+    path = tmp_path / "two marks.csv"
+    path.write_text("id,w0,w1,w2\nP1;12;8;3\nP2;10;9;4\n", encoding="utf-8")
+    with pytest.raises(DataError) as caught:
+        read_table(path, subject="id", occasions=["w0", "w1", "w2"])
+    assert [(p.code, p.row) for p in caught.value.problems][:2] == [
+        ("too few fields", 2), ("too few fields", 3)
+    ]  # fmt: skip
