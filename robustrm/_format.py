@@ -171,6 +171,18 @@ def declared(value: float | None) -> str:
     return DASH if value is None else f"{value:.6g}".replace("-", "−")
 
 
+def number_range(low: float, high: float, digits: int = 3) -> str:
+    """Return two numbers as a range, or one where they print alike.
+
+    Examples
+    --------
+    >>> number_range(0.5, 0.75), number_range(0.06251, 0.06252)
+    ('0.500 to 0.750', '0.0625')
+    """
+    ends = number(low, digits), number(high, digits)
+    return ends[0] if ends[0] == ends[1] else " to ".join(ends)
+
+
 def percent(fraction: float, decimals: int = 0) -> str:
     """Return a fraction as percent, without a space (0.95 gives ``"95%"``)."""
     return f"{100 * fraction:.{decimals}f}%"

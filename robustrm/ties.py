@@ -22,13 +22,13 @@ Bools = NDArray[np.bool_]
 
 MERGE = 1e-10
 _LARGEST_INTEGER = 2**53
+_MOST_UNITS = 10**12
 
 
 def decimal_step(values: Floats) -> Fraction | None:
     """Return the finest decimal place among `values` (by their shortest text), or None.
 
-    None means that the values have no common step with whole multiples below 2**53, as
-    computed numbers do not.
+    None means that the values have more than 12 digits, as computed numbers have.
 
     Examples
     --------
@@ -40,7 +40,9 @@ def decimal_step(values: Floats) -> Fraction | None:
         return None
     places = max(_places(value) for value in finite.tolist())
     step = Fraction(1, 10**places) if places > 0 else Fraction(1)
-    return step if _fits(finite, step) else None
+    # more digits than any instrument reports are the noise of a computation
+    digits = Fraction(float(np.max(np.abs(finite)))) / step
+    return step if digits < _MOST_UNITS else None
 
 
 def _places(value: float) -> int:
@@ -61,6 +63,25 @@ def step_units(values: Floats, step: Fraction) -> Ints | None:
     units = np.zeros(values.shape, dtype=np.int64)
     units[present] = [round(Fraction(Decimal(repr(v))) / step) for v in values[present].tolist()]
     return units
+
+
+def rounded_to(values: Floats, measured: Bools, step: Fraction) -> Floats:
+    """Return the measured values as the nearest multiples of `step`, others as they are."""
+    result = values.copy()
+    result[measured] = [
+        float(round(Fraction(Decimal(repr(value))) / step) * step)
+        for value in values[measured].tolist()
+    ]
+    return result
+
+
+def finer_step(step: Fraction, limits: Floats) -> Fraction:
+    """Return the largest step of which `step` and every limit are whole multiples."""
+    for limit in np.unique(limits[np.isfinite(limits)]).tolist():
+        exact = Fraction(Decimal(repr(limit)))
+        over = math.lcm(step.denominator, exact.denominator)
+        step = Fraction(math.gcd(int(step * over), int(exact * over)), over)
+    return step
 
 
 def merged(values: Floats, tolerance: float) -> Floats:

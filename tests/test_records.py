@@ -234,12 +234,19 @@ def test_a_declared_limit_counts_for_the_step():
 
 def test_a_declared_step_that_does_not_divide_is_told():
     table = arranged(("P1", "0.31", "0.5"), resolution=0.1)
-    assert table.values[0, 0] == 0.31
+    assert table.values[0, 0] == 0.3
     np.testing.assert_array_equal(table.units, [[3, 5]])
     assert table.ledger.of_step("resolution")[0].what == (
-        "1 value not a multiple of the declared step 0.1: kept as read, compared at the reporting "
-        "step"
+        "1 value rounded to the declared reporting step 0.1"
     )
+
+
+def test_a_limit_off_the_step_is_never_rounded():
+    """`<0.25` with a declared step of 0.1 stays 0.25: the step becomes 0.05."""
+    table = arranged(("P1", "0.3", "<0.25"), resolution=0.1)
+    assert table.values.tolist() == [[0.3, 0.25]]
+    assert table.step == Fraction(1, 20)
+    np.testing.assert_array_equal(table.units, [[6, 5]])
 
 
 # ── what stops ────────────────────────────────────────────────────────────────────────

@@ -59,7 +59,7 @@ def _missing_note(table: OccasionTable, plan: Plan) -> Note | None:
     return Note(
         "missing occasions",
         f"{count} of {table.n_subjects} without all occasions: {who}.",
-        "Left out of every comparison and test, which here need all occasions."
+        "Left out of the planned comparisons and of the tests that need all occasions."
         if plan.adjust == "closed"
         else "Not in the tests that need all occasions; each comparison uses all who have both.",
         "Ask whether the reason for the gap has to do with the value that is missing.",
@@ -76,14 +76,19 @@ def _limit_note(table: OccasionTable, plan: Plan) -> Note | None:
         if share > 0
     ]
     counts = f"{counted(below, 'value')} below and {above} above a limit ({listing(shares)})."
-    return Note(
-        "limits",
-        counts,
-        f"Ranked beyond all measured values; below the limit entered as "
-        f"{_SUBSTITUTE_WORDS[plan.substitute]} where a size is needed.",
-        "The range over other substitutes stands with the signed-rank comparisons; means, t and F "
-        "take this one alone.",
+    entered = "Ranked beyond all measured values; where a size is needed, "
+    entered += " and ".join(
+        words
+        for count, words in (
+            (below, f"{_SUBSTITUTE_WORDS[plan.substitute]} entered below it"),
+            (above, "the limit itself entered above it"),
+        )
+        if count
     )
+    elsewhere = "Means, t and F take that number alone."
+    if below and plan.pair == "signed_rank":
+        elsewhere = f"The planned comparisons are repeated with other substitutes. {elsewhere}"
+    return Note("limits", counts, f"{entered}.", elsewhere)
 
 
 _SUBSTITUTE_WORDS = {

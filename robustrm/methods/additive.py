@@ -127,7 +127,7 @@ class AdditiveProblem:
         BudgetError
             With ``null="exact"`` beyond the budget; the message says what it would cost.
         """
-        check_choice("null", options.null, NULLS)
+        check_null(options.null)
         stages = check_draws(options.draws)
         cost = plan_work(self.tables, self.form)
         if options.null == "exact" and not cost.affordable:
@@ -167,6 +167,11 @@ def f_problem(
     statistic = functools.partial(f_of, a=float(total(scores)), n=scores.shape[0])
     rows = permutation_tables(scores) if tables is None else tuple(tables)
     return AdditiveProblem(used, scores, rows, centring(scores.shape[1]), statistic, "F")
+
+
+def check_null(null: str) -> None:
+    """Refuse a way of finding the null distribution that is not known."""
+    check_choice("null", null, NULLS)
 
 
 def complete_rows(table: OccasionTable, title: str) -> OccasionTable:

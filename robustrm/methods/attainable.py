@@ -218,11 +218,9 @@ def _closed_rows(
     used = table.comparable().substitute(substitute)
     if not used.n_subjects:
         return []
-    pairs = declared_pairs(used, family)
-    places = [(used.column("family", a), used.column("family", b)) for a, b in pairs]
-    label = f"family of {len(pairs)}"
+    label = f"family of {len(declared_pairs(used, family))}"
     return [
-        (name, label, used.n_subjects, "closed", min(smallest_closed(scores, places)))
+        (name, label, used.n_subjects, "closed", smallest_closed(scores))
         for name, scores in closed_scores(used).items()
     ]
 

@@ -7,22 +7,24 @@ orders are equally likely. A pair is rejected when every partition that joins it
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, Literal, cast
 from zlib import crc32
 
 import numpy as np
 
 from robustrm._checks import check_choice
 from robustrm._format import listing
-from robustrm.errors import ArgumentError
-from robustrm.kernels.null.engine import smallest_tail, tail
+from robustrm.errors import ArgumentError, BudgetError
+from robustrm.kernels.null.engine import tail
 from robustrm.kernels.null.forms import centring
 from robustrm.kernels.null.results import Tail
 from robustrm.kernels.null.tables import permutation_tables
-from robustrm.kernels.null.work import BUDGET
+from robustrm.kernels.null.work import BUDGET, plan_work
 from robustrm.kernels.scores import aligned_scores
+from robustrm.methods.additive import check_null
 from robustrm.methods.registry import CLOSED_METHODS
 from robustrm.methods.sign_flip import sign_flip
 from robustrm.results import Comparison, Note
@@ -93,6 +95,7 @@ def closed_tests(
     pairs: Sequence[Places],
     labels: Sequence[str],
     *,
+    null: str,
     stages: Sequence[int],
     thresholds: Sequence[float],
     root: np.random.SeedSequence,
@@ -107,6 +110,8 @@ def closed_tests(
         The declared family, as places in `labels`.
     labels : sequence of str
         Occasions.
+    null : {"auto", "exact", "monte carlo"}
+        As for a single test; the work budget is shared among the partitions.
     stages, thresholds
         Monte Carlo draws, and the levels that a p value is compared with.
     root : SeedSequence
@@ -116,13 +121,20 @@ def closed_tests(
     -------
     list of ClosedTest
         One a pair, in order.
+
+    Raises
+    ------
+    BudgetError
+        With ``null="exact"`` when a partition is beyond its share of the budget.
     """
     partitions = partitions_of(pairs, len(labels))
+    check_null(null)
     tails = {
         partition: tail(
             permutation_tables(scores, blocks=partition),
             scores.sum(axis=0),
             centring(len(labels), blocks=partition),
+            null=_within_budget(scores, partition, null, BUDGET / len(partitions)),
             budget=BUDGET / len(partitions),
             stages=stages,
             thresholds=thresholds,
@@ -130,11 +142,22 @@ def closed_tests(
         )
         for partition in partitions
     }
-    smallest = smallest_closed(scores, pairs)
-    return [
-        _closed_test(pair, tails, least, labels)
-        for pair, least in zip(pairs, smallest, strict=True)
-    ]
+    smallest = smallest_closed(scores)
+    return [_closed_test(pair, tails, smallest, labels) for pair in pairs]
+
+
+def _within_budget(
+    scores: Floats, partition: Partition, null: str, budget: float
+) -> Literal["auto", "exact", "monte carlo"]:
+    if null == "exact":
+        tables = permutation_tables(scores, blocks=partition)
+        cost = plan_work(tables, centring(scores.shape[1], blocks=partition), budget=budget)
+        if not cost.affordable:
+            raise BudgetError(
+                "`null` must be 'auto' or 'monte carlo' for closed testing of this table, got "
+                f"'exact': {cost.sentence}."
+            )
+    return cast(Literal["auto", "exact", "monte carlo"], null)
 
 
 def _closed_test(
@@ -161,21 +184,15 @@ def closed_scores(used: OccasionTable) -> dict[str, Floats]:
     return {"sign_flip": values, "aligned_ranks": aligned_scores(values)}
 
 
-def smallest_closed(scores: Floats, pairs: Sequence[Places]) -> list[float]:
-    """Return the smallest adjusted p value of each pair that any outcome could give."""
-    partitions = partitions_of(pairs, scores.shape[1])
-    smallest = {partition: _smallest(scores, partition) for partition in partitions}
-    return [max(p for block, p in smallest.items() if joins(block, pair)) for pair in pairs]
+def smallest_closed(scores: Floats) -> float:
+    """Return the smallest adjusted p value that any outcome of these scores could give.
 
-
-def _smallest(scores: Floats, partition: Partition) -> float:
-    # at the most favourable outcome every subject's scores are in the same order, so all
-    # partitions are at their smallest together
-    found = smallest_tail(
-        permutation_tables(np.sort(scores, axis=1), blocks=partition),
-        centring(scores.shape[1], blocks=partition),
-    )
-    return 0.0 if found is None else found.p_value
+    Of the partitions that join a pair, the pair alone has the largest smallest p: two of the
+    2ᵐ sign patterns of the m subjects whose scores differ at all. Larger blocks have more
+    arrangements. With ties inside rows not every pair may reach it.
+    """
+    moving = int((np.ptp(scores, axis=1) > 0).sum())
+    return math.ldexp(1.0, 1 - moving) if moving else 1.0
 
 
 def _stream(root: np.random.SeedSequence, partition: Partition) -> np.random.Generator:

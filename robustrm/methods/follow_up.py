@@ -12,7 +12,7 @@ from zlib import crc32
 import numpy as np
 
 from robustrm._checks import check_choice, check_draws, check_level, check_member
-from robustrm._format import counted, level_text, listing, number
+from robustrm._format import counted, level_text, listing, number, number_range
 from robustrm.errors import ArgumentError, TooFewError
 from robustrm.methods.additive import Rng, complete_rows
 from robustrm.methods.adjusting import TITLES, adjusted
@@ -118,12 +118,19 @@ def follow_up(
     check_level(level)
     pairs = declared_pairs(table, family)
     each = level if intervals == "separate" else 1 - (1 - level) / len(pairs)
-    settings = {**(options or {}), "level": each, "null": null}
+    settings = {
+        "thresholds": tuple((1 - level) / i for i in range(1, len(pairs) + 1)),
+        **(options or {}),
+        "level": each,
+        "null": null,
+    }
     root = _root(rng)
     if adjust == "closed":
         comparisons, smallest = _closed_family(table, pairs, method, settings, root)
     else:
-        comparisons, smallest = _tested_family(table, pairs, method, settings, root, adjust)
+        comparisons, smallest = _tested_family(
+            table, pairs, method, settings, root, adjust=adjust, alpha=1 - level
+        )
     return FollowUps(
         comparisons=comparisons,
         method=method,
@@ -149,11 +156,12 @@ def _tested_family(
     method: str,
     settings: Mapping[str, Any],
     root: np.random.SeedSequence,
+    *,
     adjust: str,
+    alpha: float,
 ) -> tuple[tuple[Comparison, ...], list[float]]:
     results = [_tested(table, pair, method, settings, _stream(root, pair)) for pair in pairs]
     p_adjusted = adjusted([result.p_value for result in results], adjust)
-    alpha = max(settings.get("thresholds", (0.05,)))
     results = _over_substitutes(results, p_adjusted, adjust, alpha)
     comparisons = tuple(
         Comparison(*pair, result, p)
@@ -166,12 +174,16 @@ def _tested_family(
 def _over_substitutes(
     results: list[TestResult], p_adjusted: list[float], adjust: str, alpha: float
 ) -> list[TestResult]:
-    """Add the range of the adjusted p over substitutes that enter in all comparisons alike."""
+    """Add to every row how its adjusted p moves when one substitute enters in all rows alike.
+
+    Step-down adjustment moves a row's p with those of the others, also where no value of its
+    own lies below a limit.
+    """
     spreads = [result.details.get("substitutes") for result in results]
-    fractions = next((spread["fractions"] for spread in spreads if spread), ())
-    if not fractions:
+    steps = next((len(spread["p_values"]) for spread in spreads if spread), 0)
+    if not steps:
         return results
-    by_fraction = [
+    by_step = [
         adjusted(
             [
                 spread["p_values"][i] if spread else result.p_value
@@ -179,25 +191,16 @@ def _over_substitutes(
             ],
             adjust,
         )
-        for i in range(len(fractions))
+        for i in range(steps)
     ]
-    ranges = [(min(ps), max(ps)) for ps in zip(*by_fraction, p_adjusted, strict=True)]
-    return [
-        result
-        if spread is None
-        else replace(
-            result,
-            details={
-                **result.details,
-                "substitutes": {
-                    **spread,
-                    "p_adjusted": (low, high),
-                    "reading": "changes" if low <= alpha < high else spread["reading"],
-                },
-            },
-        )
-        for result, spread, (low, high) in zip(results, spreads, ranges, strict=True)
-    ]
+    moved = []
+    for row, (result, spread) in enumerate(zip(results, spreads, strict=True)):
+        ps = [step[row] for step in by_step] + [p_adjusted[row]]
+        signs = set(spread["directions"]) if spread else {0}
+        steady = len({p <= alpha for p in ps}) == 1 and len(signs) == 1
+        over = {"p_adjusted": (min(ps), max(ps)), "reading": "unchanged" if steady else "changes"}
+        moved.append(replace(result, details={**result.details, "over_substitutes": over}))
+    return moved
 
 
 def declared_pairs(
@@ -276,8 +279,9 @@ def _closed_family(
         closed_scores(used)[method],
         [(used.column("first", a), used.column("second", b)) for a, b in pairs],
         used.occasions,
+        null=settings["null"],
         stages=check_draws(settings.get("draws")),
-        thresholds=tuple(settings.get("thresholds", (1 - settings["level"],))),
+        thresholds=settings["thresholds"][:1],
         root=root,
     )
     p_holm = adjusted([test.raw.p_value for test in tests], "holm")
@@ -311,15 +315,12 @@ def _not_estimable(table: OccasionTable, pair: Pair, method: str, reason: str) -
 
 
 def _substitutes_note(comparisons: Sequence[Comparison], adjust: str) -> list[Note]:
-    told = [(c, c.result.details.get("substitutes", {})) for c in comparisons]
-    ranges = [(c.label, s["p_adjusted"], s["reading"]) for c, s in told if "p_adjusted" in s]
+    told = [(c.label, c.result.details.get("over_substitutes")) for c in comparisons]
+    ranges = [(label, over) for label, over in told if over is not None]
     if not ranges or adjust == "none" or len(comparisons) == 1:
         return []
-    shown = "; ".join(
-        f"{label} {number(low)}" + ("" if number(low) == number(high) else f" to {number(high)}")
-        for label, (low, high), _ in ranges
-    )
-    crossing = [label for label, _, reading in ranges if reading == "changes"]
+    shown = "; ".join(f"{label} {number_range(*over['p_adjusted'])}" for label, over in ranges)
+    crossing = [label for label, over in ranges if over["reading"] == "changes"]
     return [
         Note(
             "substitutes, adjusted",

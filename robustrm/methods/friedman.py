@@ -72,7 +72,7 @@ def friedman(
     can also make p small (level about .06-.07 at a nominal .05 with equal means but serial
     correlation or unequal spread), and "the medians differ" is not what it shows. Kendall's
     W averages 1/n without any change. When all subjects rank the occasions alike, F is
-    infinite and its p value is taken as (1/k!)^(n − 1).
+    infinite and its p value is the exact one.
 
     References
     ----------
@@ -119,9 +119,9 @@ def problem(table: OccasionTable) -> AdditiveProblem:
 
 
 def _iman_davenport(found: AdditiveProblem) -> dict[str, Any]:
-    n, k = found.scores.shape
+    n = found.scores.shape[0]
     f = float(f_of(between(found.scores), total(found.scores), n))
     beside = f_details(found, f)
-    # perfect agreement: of (k!)ⁿ arrangements without ties, k! rank all subjects alike
-    p = math.factorial(k) ** (1.0 - n) if math.isinf(f) else beside["p_f"]
+    # all subjects rank alike: no arrangement is more extreme, and the exact p is the smallest
+    p = found.smallest_p if math.isinf(f) else beside["p_f"]
     return {"iman_davenport_f": f, "iman_davenport_df": beside["f_df"], "p_iman_davenport": p}

@@ -63,8 +63,8 @@ def page_trend(
     -------
     TestResult
         Statistic L with its exact conditional p value, ties included. ``details`` holds
-        ``rank_sums`` (in `order`), ``z``, ``p_normal``, ``mean_spearman`` (the average over
-        subjects of the rank correlation with the order; only with the default scores) and
+        ``rank_sums`` (in `order`), ``z``, ``p_normal``, ``mean_spearman`` (without ties the
+        average over subjects of the rank correlation with the order; default scores only) and
         ``smallest_p``.
 
     Raises

@@ -70,7 +70,7 @@ def quade(
     Subject i has weight q_i, the mid-rank of its range among the ranges, and scores
     S_ij = q_i (r_ij − (k+1)/2). With A = ΣΣ S², B = Σ_j S_j²/n, F = (n−1) B / (A − B) on
     k − 1 and (n−1)(k−1) degrees of freedom. When A = B all subjects rank alike, F is
-    infinite and ``p_f`` is (1/k!)^(n−1).
+    infinite and ``p_f`` is the exact p, (1/k!)^(n−1) without ties.
 
     The ranges must be comparable between subjects, which on the raw scale of a skewed marker
     they are not. The null is that of exchangeable occasions, not of equal medians.
@@ -100,10 +100,9 @@ def quade(
     (3.83, 0.0152)
     """
     found = problem(table, substitute=substitute)
-    n, k = found.scores.shape
     beside = f_details(found)
     if math.isinf(found.observed_statistic):
-        beside["p_f"] = math.factorial(k) ** (1.0 - n)
+        beside["p_f"] = found.smallest_p
     return omnibus_result(
         found,
         NullOptions(null, draws, thresholds, rng),

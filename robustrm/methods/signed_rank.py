@@ -11,7 +11,7 @@ import numpy as np
 from scipy import special
 
 from robustrm._checks import Alternative, check_alternative, check_choice, check_level
-from robustrm._format import counted, level_text, number, p_cell, percent, span
+from robustrm._format import counted, level_text, listing, number_range, p_cell, percent
 from robustrm.kernels import walsh
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import sign_tables
@@ -80,9 +80,9 @@ def signed_rank(
     TestResult
         Statistic T⁺, the sum of the ranks of rises, with its exact conditional p value; the
         Hodges-Lehmann estimate with its closed exact interval and attained level. ``details``
-        holds ``t_plus``, ``t_minus``, ``n_zero``, ``n_unknown``, ``n_tied``, ``zeros``,
-        ``rank_biserial``, ``p_normal``, ``smallest_p`` and, where values lie below a limit,
-        ``substitutes``.
+        holds ``t_plus``, ``t_minus``, ``n_zero``, ``n_unknown``, ``n_sizeless``, ``n_tied``,
+        ``zeros``, ``rank_biserial``, ``p_normal``, ``smallest_p`` and, where values lie below a
+        limit, ``substitutes``.
 
     Raises
     ------
@@ -210,6 +210,12 @@ class _Core:
         return int(self.gaps.unknown.sum())
 
     @property
+    def n_sizeless(self) -> int:
+        """Differences of a known direction whose size enters as zero: 10 and above 10."""
+        codes = self.test.used.order_codes()
+        return int(((self.gaps.signs == 0) & (codes[:, 0] != codes[:, 1])).sum())
+
+    @property
     def centre(self) -> float:
         return float(walsh.pseudo_median(self.gaps.values))
 
@@ -273,6 +279,7 @@ def _details(core: _Core, zeros: str, spread: dict[str, Any] | None) -> dict[str
         "t_minus": core.t_minus,
         "n_zero": core.n_zero,
         "n_unknown": core.n_unknown,
+        "n_sizeless": core.n_sizeless,
         "n_tied": int(counts[counts > 1].sum()),
         "zeros": zeros,
         "rank_biserial": (core.t_plus - core.t_minus) / whole if whole else 0.0,
@@ -313,17 +320,22 @@ def _over_substitutes(pair: OccasionTable, settings: _Settings) -> dict[str, Any
         "estimate": (min(centres), max(centres)),
         "p_value": (min(p_values), max(p_values)),
         "p_values": tuple(p_values),
+        "directions": tuple(float(np.sign(core.centre)) for core in cores),
         "reading": "unchanged" if len(readings) == 1 else "changes",
     }
 
 
 def _zero_notes(core: _Core, zeros: str) -> list[Note]:
     notes = []
-    n, known = core.n, core.n_zero - core.n_unknown
+    n, known = core.n, core.n_zero - core.n_unknown - core.n_sizeless
     if known:
         rule = "ranked, then left out (Pratt)" if zeros == "pratt" else "left out before ranking"
         verb = "is" if known == 1 else "are"
         notes.append(Note("zeros", f"{known} of {n} differences {verb} zero: {rule}."))
+    if core.n_sizeless:
+        fact = f"{core.n_sizeless} of {n} differences known in direction only: one value lies "
+        fact += "beyond the limit at which the other was measured."
+        notes.append(Note("size unknown", fact, "Entered as zero differences."))
     if core.n_unknown:
         many = core.n_unknown > MANY_UNKNOWN * n
         notes.append(
@@ -378,18 +390,14 @@ def _disagreement_note(core: _Core, estimate: Estimate, settings: _Settings) -> 
 def _substitute_notes(spread: dict[str, Any] | None, estimate: Estimate | None) -> list[Note]:
     if spread is None:
         return []
-    moved = "" if estimate is None else f"{estimate.name} {_range(*spread['estimate'])}, "
+    moved = "" if estimate is None else f"{estimate.name} {number_range(*spread['estimate'])}, "
     return [
         Note(
             "substitutes",
-            f"With substitutes from {percent(FRACTIONS[0])} of the limit to the limit: {moved}"
-            f"P {_range(*spread['p_value'])}.",
+            f"With {listing([percent(f) for f in FRACTIONS])} of the limit entered: {moved}"
+            f"P {number_range(*spread['p_value'])}.",
             "Before adjustment P stays on its side of the level and the direction holds."
             if spread["reading"] == "unchanged"
             else "Before adjustment P crosses the level, or the direction turns.",
         )
     ]
-
-
-def _range(low: float, high: float) -> str:
-    return number(low) if number(low) == number(high) else span(low, high)

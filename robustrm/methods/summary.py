@@ -88,7 +88,11 @@ def summarize(table: OccasionTable, *, substitute: str = "half") -> tuple[Occasi
 def _summary(table: OccasionTable, j: int, substitute: str) -> OccasionSummary:
     present = ~table.missing[:, j]
     below, above = table.below[present, j], table.above[present, j]
-    ranked = np.where(below, -np.inf, np.where(above, np.inf, table.values[present, j]))
+    # "<0.8" and a measured 0.4 have no order: the occasion is ranked at its strictest limit
+    alone = table.select(occasions=table.occasions[j : j + 1]).recensored()
+    values = alone.values[present, 0]
+    ranked = np.where(alone.below[present, 0], -np.inf, values)
+    ranked = np.where(alone.above[present, 0], np.inf, ranked)
     entered = table.substitute(substitute).values[present, j]
     mostly_beyond = bool((below | above).sum() * 2 > present.sum())
     return OccasionSummary(

@@ -177,7 +177,9 @@ def arrange(
         raise DataError(problems, source)
     grid = _Grid.of(placed, below.array, above.array)
     step = _step(placed, [lower, upper], declared.resolution, averaged=bool(kept))
-    units, step_lines = _units(grid.values, step, declared.resolution)
+    values, step, units, step_lines = _on_steps(
+        grid, step, np.stack([below.array, above.array]), declared.resolution
+    )
     lines = (
         *found.lines,
         *_missing_lines(placed),
@@ -188,12 +190,12 @@ def arrange(
         *step_lines,
     )
     return Arranged(
-        **grid.fields(),
+        **{**grid.fields(), "values": values},
         lower_limit=below.array,
         upper_limit=above.array,
         subjects=ids,
         occasions=labels,
-        step=None if units is None else step,
+        step=step,
         units=units,
         replicates=kept,
         notes=(*found.notes, *below.notes, *above.notes, *spread_notes(kept)),
@@ -292,32 +294,37 @@ def _written_places(number: float) -> int:
     return max(0, -exponent) if isinstance(exponent, int) else 0
 
 
-def _units(
-    values: Floats, step: Fraction | None, resolution: float | None
-) -> tuple[NDArray[np.int64] | None, list[LedgerLine]]:
-    """Return the values as whole multiples of the step, and a line where that is rounding."""
-    units = None if step is None else ties.step_units(values, step)
-    if units is None or step is None or resolution is None:
-        return units, []
-    lost = values[(values > 0) & (units == 0)]
+def _on_steps(
+    grid: _Grid, step: Fraction | None, bounds: Floats, resolution: float | None
+) -> tuple[Floats, Fraction | None, NDArray[np.int64] | None, list[LedgerLine]]:
+    """Return values, step and whole multiples of it, and a line where that rounded values.
+
+    The step is made fine enough for every limit, so that a limit is never rounded.
+    """
+    if step is None:
+        return grid.values, None, None, []
+    values, lines = grid.values, []
+    if resolution is not None:
+        measured = ~np.isnan(values) & ~grid.below & ~grid.above
+        values = ties.rounded_to(values, measured, step)
+        lines = _rounding_lines(grid.values, values, resolution)
+    fine = ties.finer_step(step, bounds)
+    units = ties.step_units(values, fine)
+    return values, None if units is None else fine, units, lines
+
+
+def _rounding_lines(read: Floats, values: Floats, resolution: float) -> list[LedgerLine]:
+    lost = read[(read > 0) & (values == 0)]
     if lost.size:
         raise ArgumentError(
             f"`resolution` must not round a positive value to zero, got {resolution:g} for the "
             f"value {float(lost[0]):g}."
         )
-    pairs = zip(values.ravel().tolist(), units.ravel().tolist(), strict=True)
-    off = sum(
-        unit * step != Fraction(Decimal(repr(value)))
-        for value, unit in pairs
-        if not math.isnan(value)
-    )
+    off = int((read != values)[~np.isnan(read)].sum())
     if not off:
-        return units, []
-    what = (
-        f"{counted(off, 'value')} not a multiple of the declared step {resolution:g}: kept as "
-        "read, compared at the reporting step"
-    )
-    return units, [LedgerLine("resolution", what, cells=off)]
+        return []
+    what = f"{counted(off, 'value')} rounded to the declared reporting step {resolution:g}"
+    return [LedgerLine("resolution", what, cells=off)]
 
 
 # ── lines of the ledger ───────────────────────────────────────────────────────────────

@@ -158,12 +158,13 @@ def _substitutes_found(document: Document, style: Style) -> str:
         if spread is not None:
             estimate = row["result"]["estimate"]
             moved = f"{estimate['name']} {_range(*spread['estimate'])}, " if estimate else ""
-            verb = "is unchanged" if spread["reading"] == "unchanged" else "changes"
+            over = row["result"]["details"].get("over_substitutes", spread)
+            verb = "is unchanged" if over["reading"] == "unchanged" else "changes"
             low, high = spread["p_value"]
             p_values = p_range(low, high, style)
             name = adjustment(document["primary"])
-            if name is not None and "p_adjusted" in spread:
-                lowest, highest = spread["p_adjusted"]
+            if name is not None and "p_adjusted" in over:
+                lowest, highest = over["p_adjusted"]
                 p_values += f", {name}-adjusted {p_range(lowest, highest, style)}"
             parts.append(f"{row['label']}: {moved}{p_values}, the reading {verb}")
     if not parts:

@@ -14,7 +14,7 @@ from numpy.typing import ArrayLike
 from robustrm import ties
 from robustrm._format import listing, number
 from robustrm.errors import ArgumentError
-from robustrm.ties import Bools, Floats
+from robustrm.ties import Bools, Floats, Ints
 
 if TYPE_CHECKING:
     from robustrm.table.occasion_table import OccasionTable
@@ -71,10 +71,28 @@ def cell_limits(argument: str, limit: ArrayLike | None, values: Floats, beyond: 
     return limits
 
 
-def reporting_step(values: Floats, resolution: float | None) -> Fraction | None:
-    """Return the reporting step: as declared, or the finest decimal place of the values."""
+def on_steps(
+    values: Floats, beyond: Bools, limits: Floats, resolution: float | None
+) -> tuple[Floats, Fraction | None, Ints | None]:
+    """Return values, reporting step and whole multiples of it.
+
+    A declared step rounds the measured values to it. The step is then made fine enough for
+    every limit to be a whole multiple, so that a limit is never rounded.
+    """
     if resolution is None:
-        return ties.decimal_step(values)
+        step = ties.decimal_step(np.concatenate([values.ravel(), limits.ravel()]))
+    else:
+        step = declared_step(resolution)
+        values = ties.rounded_to(values, ~np.isnan(values) & ~beyond, step)
+    if step is None:
+        return values, None, None
+    step = ties.finer_step(step, limits)
+    units = ties.step_units(values, step)
+    return values, None if units is None else step, units
+
+
+def declared_step(resolution: float) -> Fraction:
+    """Return a declared reporting step, exactly."""
     if not (math.isfinite(resolution) and resolution > 0):
         raise ArgumentError(f"`resolution` must be a positive number, got {resolution!r}.")
     return Fraction(repr(float(resolution)))

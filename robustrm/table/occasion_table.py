@@ -31,7 +31,7 @@ from robustrm.table.arrays import (
     cell_limits,
     check_consistent,
     default_ids,
-    reporting_step,
+    on_steps,
     same,
 )
 from robustrm.table.limits import (
@@ -225,7 +225,8 @@ class OccasionTable:
         high = cell_flags("above", above, cells)
         lower = cell_limits("lower_limit", lower_limit, cells, low)
         upper = cell_limits("upper_limit", upper_limit, cells, high)
-        step = reporting_step(cells, resolution)
+        limits = np.stack([lower, upper])
+        cells, step, units = on_steps(cells, low | high, limits, resolution)
         measured = ~np.isnan(cells)
         counts = CellCounts(
             values=int((measured & ~low & ~high).sum()),
@@ -245,7 +246,7 @@ class OccasionTable:
             marker=marker,
             unit=unit,
             step=step,
-            units=None if step is None else ties.step_units(cells, step),
+            units=units,
             ledger=Ledger((LedgerLine("read", "taken from an array", cells=cells.size),), counts),
         )
 
