@@ -251,7 +251,8 @@ def _tested(
 ) -> TestResult:
     known = {entry.name: entry for entry in METHODS if entry.kind == "pair"}
     entry = known[check_choice("method", method, tuple(known))]
-    common = {"level", "null", "rng"}  # offered to every method, used by those that take them
+    # offered to every method, used by those that take them
+    common = {"level", "null", "rng", "thresholds"}
     for name in settings:
         if name not in common:
             check_choice(f"options of {method}", name, entry.options)
