@@ -22,6 +22,7 @@ def analysis_notes(
         _design_note(plan),
         _missing_note(table, plan),
         _limit_note(table, plan),
+        _given_up_note(table),
         _spread_note(summary),
     )
     return (*table.notes, *(note for note in candidates if note is not None))
@@ -89,6 +90,20 @@ def _limit_note(table: OccasionTable, plan: Plan) -> Note | None:
     if below and plan.pair == "signed_rank":
         elsewhere = f"The planned comparisons are repeated with other substitutes. {elsewhere}"
     return Note("limits", counts, f"{entered}.", elsewhere)
+
+
+def _given_up_note(table: OccasionTable) -> Note | None:
+    common = table.recensored()
+    count = int((common.censored & ~table.censored).sum())
+    if not count:
+        return None
+    return Note(
+        "given up",
+        f"{counted(count, 'measured value')} beyond the limit that all cells share.",
+        "A cell reported only as beyond cannot be compared with them: in every comparison of "
+        "occasions they count as beyond the limit, and the substitute enters for them.",
+        "Check that the limits are those of each assay and batch.",
+    )
 
 
 _SUBSTITUTE_WORDS = {

@@ -16,7 +16,7 @@ from typing import Any, Literal, cast
 import numpy as np
 from scipy import special
 
-from robustrm._checks import check_choice, check_draws
+from robustrm._checks import Alternative, check_choice, check_draws
 from robustrm._format import counted, number, percent
 from robustrm.errors import BudgetError, TooFewError
 from robustrm.kernels.null.engine import smallest_tail, tail
@@ -144,7 +144,7 @@ class AdditiveProblem:
             thresholds=tuple(options.thresholds),
             rng=np.random.default_rng(options.rng),
         )
-        return NullTail(found, self.smallest_p, _monte_carlo_notes(found, options.thresholds))
+        return NullTail(found, self.smallest_p, monte_carlo_notes(found, options.thresholds))
 
     @property
     def smallest_p(self) -> float | None:
@@ -204,6 +204,15 @@ def complete_pair(table: OccasionTable, first: str, second: str, title: str) -> 
             f"{title} of {second!r} against {first!r} needs at least 1 subject with both, got none."
         )
     return pair
+
+
+def normal_p(z: float, alternative: Alternative) -> float:
+    """Return the normal approximation of a linear statistic's p; 1 where nothing can move."""
+    if math.isnan(z):
+        return 1.0
+    tails = {"greater": -z, "less": z, "two-sided": -abs(z)}
+    tail = float(special.ndtr(tails[alternative]))
+    return 2 * tail if alternative == "two-sided" else tail
 
 
 def chi2_details(problem: AdditiveProblem) -> dict[str, Any]:
@@ -280,7 +289,8 @@ def _unmoved_note(scores: Floats) -> tuple[Note, ...]:
     )
 
 
-def _monte_carlo_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]:
+def monte_carlo_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]:
+    """Return what a reader must know of a Monte Carlo p, nothing of an exact one."""
     if found.p_interval is None or found.draws is None:
         return ()
     low, high = found.p_interval

@@ -71,9 +71,9 @@ def aligned_ranks(
     between subjects makes it more powerful than Friedman's test at small k.
 
     The null is that of exchangeable occasions: with equal means but serial correlation or
-    unequal spread p is too often small (.06-.08 at a nominal .05). Equality of aligned values
-    is judged in whole multiples of the reporting step; on logs, values closer than 1e-10 of
-    the largest are tied.
+    unequal spread p is too often small (up to about .075 at a nominal .05). Equality of aligned
+    values is judged in whole multiples of the reporting step; on logs, values closer than
+    1e-10 of the largest are tied.
 
     References
     ----------

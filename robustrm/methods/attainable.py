@@ -59,6 +59,8 @@ class Attainable:
     def __str__(self) -> str:
         subjects = counted(self.n_subjects, "subject")
         comparisons = counted(self.n_comparisons, "comparison")
+        if self.smallest_p == 0:
+            return "P values of this test have no smallest one."
         text = f"With {subjects} and {comparisons} the smallest p is {number(self.smallest_p)}"
         if self.adjust != "none" and self.n_comparisons > 1:
             text += f", after {TITLES[self.adjust]} {number(self.smallest_p_adjusted)}"

@@ -8,7 +8,7 @@ from robustrm.table import OccasionTable
 MOSTLY_BEYOND = Note(
     "mostly beyond the limit",
     "More than half of the values of an occasion lie beyond a limit.",
-    "No shift is estimated: it would be that of the substitute.",
+    "No shift is estimated: it would be that of the limit or its substitute.",
     "The counts of falls and rises stand instead.",
 )
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any, Literal, cast
 from zlib import crc32
 
@@ -24,10 +24,11 @@ from robustrm.kernels.null.results import Tail
 from robustrm.kernels.null.tables import permutation_tables
 from robustrm.kernels.null.work import BUDGET, plan_work
 from robustrm.kernels.scores import aligned_scores
-from robustrm.methods.additive import check_null
+from robustrm.methods.additive import check_null, monte_carlo_notes
+from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.methods.registry import CLOSED_METHODS
-from robustrm.methods.sign_flip import sign_flip
-from robustrm.results import Comparison, Note
+from robustrm.methods.sign_flip import NAMES, mean_shift
+from robustrm.results import Comparison, Note, TestResult
 from robustrm.table import OccasionTable
 from robustrm.ties import Floats
 
@@ -50,6 +51,8 @@ class ClosedTest:
         The partition that gave it.
     deciding : Tail
         How that p value was found.
+    contrast : float
+        Difference of the mean scores, later less earlier.
     smallest : float
         The smallest adjusted p value that any arrangement of these scores could give.
     """
@@ -58,6 +61,7 @@ class ClosedTest:
     p_adjusted: float
     partition: str
     deciding: Tail
+    contrast: float
     smallest: float
 
 
@@ -143,7 +147,8 @@ def closed_tests(
         for partition in partitions
     }
     smallest = smallest_closed(scores)
-    return [_closed_test(pair, tails, smallest, labels) for pair in pairs]
+    means = scores.mean(axis=0)
+    return [_closed_test(pair, tails, means, smallest, labels) for pair in pairs]
 
 
 def _within_budget(
@@ -163,6 +168,7 @@ def _within_budget(
 def _closed_test(
     pair: Places,
     tails: dict[Partition, Tail],
+    means: Floats,
     smallest: float,
     labels: Sequence[str],
 ) -> ClosedTest:
@@ -174,6 +180,7 @@ def _closed_test(
         p_adjusted=tails[worst].p_value,
         partition=written(worst, labels),
         deciding=tails[worst],
+        contrast=float(np.subtract(*means[list(pair)][::-1])),
         smallest=smallest,
     )
 
@@ -187,9 +194,9 @@ def closed_scores(used: OccasionTable) -> dict[str, Floats]:
 def smallest_closed(scores: Floats) -> float:
     """Return the smallest adjusted p value that any outcome of these scores could give.
 
-    Of the partitions that join a pair, the pair alone has the largest smallest p: two of the
-    2ᵐ sign patterns of the m subjects whose scores differ at all. Larger blocks have more
-    arrangements. With ties inside rows not every pair may reach it.
+    From three subjects on, of the partitions that join a pair the pair alone has the largest
+    smallest p: two of the 2ᵐ sign patterns of the m subjects whose scores differ at all.
+    Larger blocks have more arrangements. With ties inside rows not every pair may reach it.
     """
     moving = int((np.ptp(scores, axis=1) > 0).sum())
     return math.ldexp(1.0, 1 - moving) if moving else 1.0
@@ -215,27 +222,52 @@ def closed_comparison(
     p_holm: float,
     *,
     level: float,
-    substitute: str,
+    root: np.random.SeedSequence,
 ) -> Comparison:
-    """Make the row of one pair: the sign flip of its values, with the closed p value.
+    """Make the row of one pair with its closed p value.
 
-    With aligned ranks the p values are those of the rank scores; estimate and interval stay
-    those of the sign flip, which a note says.
+    Estimate and interval are those of the sign flip of the values, also with aligned ranks,
+    which a note says.
     """
-    result = sign_flip(used, *pair, level=level, substitute=substitute)
-    result = replace(
-        result,
+    values = used.paired(*pair)[0].values
+    by_ranks = method == "aligned_ranks"
+    names = NAMES[used.scale == "log"]
+    # aligned scores are 2k times the ranks
+    statistic = test.contrast / (2 * used.n_occasions) if by_ranks else float(values.mean())
+    symbol = "difference of mean aligned ranks"
+    if not by_ranks:
+        symbol = "mean log ratio" if used.scale == "log" else "mean difference"
+    shift = None
+    if not is_mostly_beyond(used.select(occasions=pair)):
+        places = tuple(used.column("family", label) for label in pair)
+        shift = mean_shift(values, used, level, _stream(root, (places,)))
+    result = TestResult(
         method=method,
+        statistic=statistic,
+        statistic_name=symbol,
+        df=(),
         p_value=test.raw.p_value,
         null=test.raw.null,
-        p_interval=test.raw.p_interval,
-        draws=test.raw.draws,
+        n_subjects=used.n_subjects,
+        n_occasions=2,
         hypothesis=(
             "Swapping a subject's values at the two occasions changes nothing, given the others."
         ),
-        notes=(*result.notes, *((_INTERVAL_OF_VALUES,) if method == "aligned_ranks" else ())),
+        estimand="shift of the subject-centred values, by ranks" if by_ranks else names,
+        scale=used.scale,
+        alternative="two-sided",
+        p_interval=test.raw.p_interval,
+        arrangements=test.raw.arrangements,
+        draws=test.raw.draws,
+        estimate=shift,
+        subjects=used.ids,
+        notes=(
+            *monte_carlo_notes(test.raw, ()),
+            *((MOSTLY_BEYOND,) if shift is None else ()),
+            *((_INTERVAL_OF_VALUES,) if by_ranks else ()),
+        ),
         details={
-            **result.details,
+            "smallest_p": test.smallest,
             "p_holm": p_holm,
             "partition": test.partition,
             "partition_null": test.deciding.null,

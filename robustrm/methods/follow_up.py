@@ -287,9 +287,7 @@ def _closed_family(
     )
     p_holm = adjusted([test.raw.p_value for test in tests], "holm")
     comparisons = tuple(
-        closed_comparison(
-            used, pair, method, test, holm, level=settings["level"], substitute=substitute
-        )
+        closed_comparison(used, pair, method, test, holm, level=settings["level"], root=root)
         for pair, test, holm in zip(pairs, tests, p_holm, strict=True)
     )
     return comparisons, [test.smallest for test in tests]
@@ -346,10 +344,10 @@ def _notes(
                 f"The intervals hold {level_text(level)} each and are not adjusted for "
                 f"{counted(m, 'comparison')}; the p values are, after {TITLES[adjust]}.",
                 "An interval may exclude no change where the adjusted p value does not.",
-                "Simultaneous intervals with Bonferroni-adjusted P have both alike.",
+                "Simultaneous intervals go with Bonferroni-adjusted P.",
             )
         )
-    if m > 1 and intervals == "simultaneous":
+    if m > 1 and has_interval and intervals == "simultaneous":
         notes.append(
             Note(
                 "simultaneous intervals",
@@ -361,6 +359,9 @@ def _notes(
                 "level where the interval includes no change.",
             )
         )
+    if has_interval and comparisons[0].result.alternative in ("greater", "less"):
+        fact = "P values are one-sided, intervals two-sided."
+        notes.append(Note("one-sided", fact, "They need not agree at the level."))
     notes.extend(_substitutes_note(comparisons, adjust))
     sizes = sorted({c.result.n_subjects for c in comparisons})
     if len(sizes) > 1:

@@ -69,7 +69,7 @@ def friedman(
     -----
     The null distribution rearranges each subject's own values over the occasions, ties kept,
     so it is exact at any n. It tests exchangeable occasions: unequal spread or correlation
-    can also make p small (level about .06-.07 at a nominal .05 with equal means but serial
+    can also make p small (level up to about .065 at a nominal .05 with equal means but serial
     correlation or unequal spread), and "the medians differ" is not what it shows. Kendall's
     W averages 1/n without any change. When all subjects rank the occasions alike, F is
     infinite and its p value is the exact one.

@@ -65,8 +65,9 @@ def mean_permutation(
     -----
     F rises with Σ_j (Σ_i (y_ij − ȳ_i))² over the arrangements of a table, because the total
     variation within subjects does not change. The null is that of exchangeable occasions:
-    with equal means but serial correlation or unequal spread p is too often small (.07-.095
-    at a nominal .05). On the raw scale of a skewed marker a few people decide the result.
+    with equal means but serial correlation or unequal spread p is too often small (up to
+    about .09 at a nominal .05). On the raw scale of a skewed marker a few people decide the
+    result.
 
     References
     ----------

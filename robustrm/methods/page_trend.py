@@ -6,9 +6,8 @@ import math
 from collections.abc import Sequence
 
 import numpy as np
-from scipy import special
 
-from robustrm._checks import Alternative, check_alternative, check_member, check_names
+from robustrm._checks import check_alternative, check_member, check_names
 from robustrm.errors import ArgumentError
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import permutation_tables
@@ -18,6 +17,7 @@ from robustrm.methods.additive import (
     NullOptions,
     Rng,
     complete_rows,
+    normal_p,
     omnibus_result,
 )
 from robustrm.results import TestResult
@@ -113,7 +113,7 @@ def page_trend(
     details = {
         "rank_sums": tuple(ranks.sum(axis=0).tolist()),
         "z": z,
-        "p_normal": _p_normal(z, direction),
+        "p_normal": normal_p(z, direction),
     }
     if scores is None:
         # Page (1963): L and the average Spearman correlation are linear in each other
@@ -176,11 +176,3 @@ def trend_z(ranks: Floats, weights: Floats) -> float:
     lines = weights - weights.mean()
     variance = float(np.sum(centred**2) / (k - 1) * np.sum(lines**2))
     return float(centred.sum(axis=0) @ lines) / math.sqrt(variance) if variance else math.nan
-
-
-def _p_normal(z: float, alternative: Alternative) -> float:
-    if math.isnan(z):
-        return 1.0
-    tails = {"greater": -z, "less": z, "two-sided": -abs(z)}
-    tail = float(special.ndtr(tails[alternative]))
-    return 2 * tail if alternative == "two-sided" else tail

@@ -13,7 +13,7 @@ from robustrm.errors import TooFewError
 from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
-from robustrm.ties import power_of_two
+from robustrm.ties import MERGE, power_of_two
 
 
 def paired_t(
@@ -83,7 +83,8 @@ def paired_t(
     size = power_of_two(gaps.values)
     mean = float(np.mean(gaps.values / size)) * size
     error = float(np.std(gaps.values / size, ddof=1)) / math.sqrt(n) * size
-    constant = len(set(gaps.values.tolist())) == 1
+    # differences of derived values that agree to rounding are equal
+    constant = float(np.ptp(gaps.values / size)) <= MERGE
     t = math.nan if constant else mean / error
     margin = float(special.stdtrit(n - 1, (1 + level) / 2)) * error
     mostly_beyond = is_mostly_beyond(used)

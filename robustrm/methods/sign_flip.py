@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 
 import numpy as np
-from scipy import special
 
 from robustrm._checks import check_alternative, check_level
 from robustrm._format import counted, level_text
 from robustrm.kernels import subset_means
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import sign_tables
-from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, complete_pair
+from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, complete_pair, normal_p
 from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
 from robustrm.table import OccasionTable
@@ -109,7 +109,7 @@ def sign_flip(
     pair = test.used
     values = pair.paired(first, second)[0].values
     found = test.tail(NullOptions(null, draws, thresholds, rng))
-    estimate = None if is_mostly_beyond(pair) else _estimate(values, pair, level, rng)
+    estimate = None if is_mostly_beyond(pair) else mean_shift(values, pair, level, rng)
     return TestResult(
         method="sign_flip",
         statistic=test.observed_statistic,
@@ -128,7 +128,7 @@ def sign_flip(
         estimate=estimate,
         subjects=pair.ids,
         notes=(*found.notes, *_no_interval(estimate, values.size, level)),
-        details={"p_normal": _p_normal(test.scores), "smallest_p": found.smallest_p},
+        details={"p_normal": normal_p(_z(test.scores), direction), "smallest_p": found.smallest_p},
     )
 
 
@@ -155,7 +155,8 @@ def problem(
     )
 
 
-def _estimate(values: Floats, pair: OccasionTable, level: float, rng: Rng) -> Estimate:
+def mean_shift(values: Floats, pair: OccasionTable, level: float, rng: Rng) -> Estimate:
+    """Return the mean difference (on logs a ratio) with the interval of the sign flip."""
     limits, attained = _interval(values, level, rng)
     return Estimate.of_shift(
         NAMES,
@@ -188,9 +189,9 @@ def _interval(
     return limits, 1 - 2 * rank / whole
 
 
-def _p_normal(scores: Floats) -> float:
+def _z(scores: Floats) -> float:
     deviation = float(np.sqrt(np.sum(scores**2)))
-    return float(2 * special.ndtr(-abs(scores.sum()) / deviation)) if deviation else 1.0
+    return float(scores.sum()) / deviation if deviation else math.nan
 
 
 def _no_interval(estimate: Estimate | None, n: int, level: float) -> tuple[Note, ...]:

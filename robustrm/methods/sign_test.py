@@ -6,13 +6,12 @@ import math
 from collections.abc import Sequence
 
 import numpy as np
-from scipy import special
 
 from robustrm._checks import check_alternative, check_level
 from robustrm._format import counted
 from robustrm.kernels.null.forms import linear
 from robustrm.kernels.null.tables import sign_tables
-from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, complete_pair
+from robustrm.methods.additive import AdditiveProblem, NullOptions, Rng, complete_pair, normal_p
 from robustrm.methods.effects import Directions, directions, probability_of_fall
 from robustrm.results import Note, TestResult
 from robustrm.table import OccasionTable
@@ -113,7 +112,7 @@ def sign_test(
             "n_fell": moved.fell,
             "n_unchanged": moved.unchanged,
             "n_unknown": moved.unknown,
-            "p_normal": _p_normal(moved),
+            "p_normal": normal_p(_z(moved), direction),
             "smallest_p": found.smallest_p,
         },
     )
@@ -138,11 +137,9 @@ def problem(
     )
 
 
-def _p_normal(moved: Directions) -> float:
+def _z(moved: Directions) -> float:
     changes = moved.rose + moved.fell
-    if not changes:
-        return 1.0
-    return float(2 * special.ndtr(-abs(moved.rose - moved.fell) / math.sqrt(changes)))
+    return (moved.rose - moved.fell) / math.sqrt(changes) if changes else math.nan
 
 
 def _left_out(moved: Directions) -> tuple[Note, ...]:

@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from scipy import special
 
 from robustrm._checks import Alternative, check_alternative, check_choice, check_level
 from robustrm._format import counted, level_text, listing, number_range, p_cell, percent
@@ -22,6 +21,7 @@ from robustrm.methods.additive import (
     NullTail,
     Rng,
     complete_pair,
+    normal_p,
 )
 from robustrm.methods.beyond import MOSTLY_BEYOND, is_mostly_beyond
 from robustrm.results import Estimate, Note, TestResult
@@ -167,7 +167,7 @@ def signed_rank(
             *_estimate_notes(core, estimate, settings, mostly_beyond=mostly_beyond),
             *_substitute_notes(spread, estimate),
         ),
-        details=_details(core, zeros, spread),
+        details=_details(core, zeros, direction, spread),
     )
 
 
@@ -270,7 +270,9 @@ def _estimate(core: _Core, level: float, pair: OccasionTable) -> Estimate:
     )
 
 
-def _details(core: _Core, zeros: str, spread: dict[str, Any] | None) -> dict[str, Any]:
+def _details(
+    core: _Core, zeros: str, alternative: Alternative, spread: dict[str, Any] | None
+) -> dict[str, Any]:
     n = core.n
     whole = n * (n + 1) / 2 if zeros == "pratt" else core.t_plus + core.t_minus
     _, counts = np.unique(core.gaps.sizes[core.gaps.sizes > 0], return_counts=True)
@@ -283,7 +285,7 @@ def _details(core: _Core, zeros: str, spread: dict[str, Any] | None) -> dict[str
         "n_tied": int(counts[counts > 1].sum()),
         "zeros": zeros,
         "rank_biserial": (core.t_plus - core.t_minus) / whole if whole else 0.0,
-        "p_normal": p_normal(core.t_plus, core.ranks),
+        "p_normal": normal_p(normal_z(core.t_plus, core.ranks), alternative),
         "smallest_p": core.null.smallest_p,
     }
     if spread is not None:
@@ -291,16 +293,13 @@ def _details(core: _Core, zeros: str, spread: dict[str, Any] | None) -> dict[str
     return details
 
 
-def p_normal(t_plus: float, ranks: Floats) -> float:
-    """Return the two-sided normal approximation given the ranks, without continuity correction.
+def normal_z(t_plus: float, ranks: Floats) -> float:
+    """Return T⁺ less its mean over its SD given the ranks, without continuity correction.
 
     Under the null T⁺ has mean Σ r / 2 and variance Σ r² / 4 (ties and zeros included).
     """
     deviation = math.sqrt(float((ranks**2).sum()) / 4)
-    if deviation == 0:
-        return 1.0
-    z = (t_plus - float(ranks.sum()) / 2) / deviation
-    return float(2 * special.ndtr(-abs(z)))
+    return (t_plus - float(ranks.sum()) / 2) / deviation if deviation else math.nan
 
 
 def _over_substitutes(pair: OccasionTable, settings: _Settings) -> dict[str, Any] | None:

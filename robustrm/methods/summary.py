@@ -94,7 +94,7 @@ def _summary(table: OccasionTable, j: int, substitute: str) -> OccasionSummary:
     ranked = np.where(alone.below[present, 0], -np.inf, values)
     ranked = np.where(alone.above[present, 0], np.inf, ranked)
     entered = table.substitute(substitute).values[present, j]
-    mostly_beyond = bool((below | above).sum() * 2 > present.sum())
+    mostly_beyond = bool(alone.censored[present, 0].sum() * 2 > present.sum())
     return OccasionSummary(
         occasion=table.occasions[j],
         n=int(present.sum()),

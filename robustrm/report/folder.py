@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import itertools
 import json
+import re
 import shutil
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -27,6 +28,11 @@ from robustrm.report.tables import csv_tables
 
 _FILES = frozenset({"report.html", "results.json", "methods.txt", "plan.toml"})
 _FOLDERS = frozenset({"tables", "figures"})
+# what earlier reports put into these folders; anything else is somebody's own
+_WRITTEN = re.compile(
+    r"(summary|comparisons|beside|effects|inclusion|ledger|cells)\.csv"
+    r"|(trajectories|comparisons|null-distribution|change-\d+)\.(svg|png)"
+)
 
 
 def write_report(
@@ -105,7 +111,7 @@ def _check_target(target: Path) -> None:
 
 def _is_ours(path: Path) -> bool:
     if path.name in _FOLDERS and path.is_dir():
-        return all(inner.suffix in (".csv", ".svg", ".png") for inner in path.iterdir())
+        return all(_WRITTEN.fullmatch(inner.name) for inner in path.iterdir())
     return path.name in _FILES and path.is_file()
 
 

@@ -151,7 +151,7 @@ def _overall_method(document: Document) -> str:
 
 def _companions_method(document: Document) -> str:
     titles = dict.fromkeys(in_sentence(row["title"]) for row in document["supplementary"])
-    return f"Beside these, as planned: {listing([*titles])}." if titles else ""
+    return f"Beside these, by default: {listing([*titles])}." if titles else ""
 
 
 def _beside_method(document: Document) -> str:
@@ -170,8 +170,16 @@ def _beside_method(document: Document) -> str:
 
 
 def _limits_rule(document: Document) -> str:
-    if not any(s["n_below"] + s["n_above"] for s in document["summary"]):
+    given_up = any(note["code"] == "given up" for note in document["notes"])
+    below = given_up or any(s["n_below"] for s in document["summary"])
+    above = any(s["n_above"] for s in document["summary"])
+    if not below and not above:
         return ""
+    if not below:
+        return (
+            "Values above a limit were ranked beyond all measured ones; where a size was needed, "
+            "the limit itself entered."
+        )
     rule = SUBSTITUTES[document["plan"]["substitute"]]
     repeated = ", and the signed-rank comparisons were repeated with other substitutes"
     return (

@@ -67,7 +67,7 @@ def cell_limits(argument: str, limit: ArrayLike | None, values: Floats, beyond: 
             f"`{argument}` must be one number, one an occasion ({values.shape[1]}) or one a "
             f"cell {values.shape}, got shape {np.shape(limit)}."
         ) from None
-    limits[beyond & np.isnan(limits)] = values[beyond & np.isnan(limits)]
+    limits[beyond] = values[beyond]  # a cell that states a limit keeps it
     return limits
 
 

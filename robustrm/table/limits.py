@@ -50,6 +50,12 @@ def at_common_limit(table: OccasionTable, side: Literal["lower", "upper"]) -> Oc
     moved = flags | given_up
     if not given_up.any() and bool(np.all(limits[moved] == limit)):
         return table
+    if table.entered is not None:
+        raise ArgumentError(
+            "`substitute` must come after the table is brought to its common limit, got a table "
+            f"whose values below the limit already entered as {float(table.entered):.3g} times "
+            "the limit. Start from the table before."
+        )
     units = table.units
     if units is not None:
         units = _limit_units(table, limit, moved)

@@ -605,6 +605,11 @@ class OccasionTable:
                 f"the limit already entered as {float(self.entered):.3g} times the limit. Start "
                 "from the table before."
             )
+        if self.scale == "raw" and factor < 1 and (self.lower_limit[self.below] < 0).any():
+            raise ArgumentError(
+                f"`substitute` must be 'limit' where a limit is negative, got {rule!r}: a part of "
+                "a negative limit lies above it."
+            )
         raised = math.log(factor) if self.scale == "log" else 0.0
         filled = self.lower_limit + raised if raised else self.lower_limit * float(factor)
         step, units = substituted_units(self, factor)

@@ -131,3 +131,60 @@ def test_ten_and_above_ten_is_no_zero_difference():
     assert result.details["n_sizeless"] == 1
     assert "size unknown" in codes(result.notes)
     assert "zeros" not in codes(result.notes)
+
+
+def test_a_closed_family_beyond_forty_subjects_repeats_with_the_seed():
+    rng = np.random.default_rng(1)
+    values = rng.lognormal(3, 0.5, (45, 3)).round(1)
+    runs = [
+        rm.follow_up(
+            table_of(values).log(), method="sign_flip", adjust="closed", rng=5,
+            null="monte carlo", options={"draws": 999},
+        )
+        for _ in range(2)
+    ]  # fmt: skip
+    assert [c.to_dict() for c in runs[0]] == [c.to_dict() for c in runs[1]]
+
+
+def test_a_substitute_is_not_carried_over_a_later_common_limit():
+    marks = [[1, 0], [0, 1], *[[0, 0]] * 5]
+    rows = [[0.3, 1.5], [0.5, 0.8], [2, 1.0], [3, 1.2], [1.7, 0.9], [2.5, 1.1], [1.9, 1.0]]
+    table = table_of(rows, below=marks, lower_limit=[0.3, 0.8])
+    with pytest.raises(rm.ArgumentError, match="must come after the table is brought to"):
+        rm.sign_flip(table.substitute("half"), *PAIR)
+
+
+def test_a_part_of_a_negative_limit_is_refused():
+    rows = [[-2, -1.5], [-2, -1.2], [-0.5, 0.5]]
+    table = table_of(rows, below=[[1, 0], [1, 0], [0, 0]], lower_limit=-2)
+    with pytest.raises(rm.ArgumentError, match="a part of a negative limit lies above it"):
+        rm.sign_flip(table, *PAIR)
+    assert rm.sign_flip(table, *PAIR, substitute="limit").n_subjects == 3
+
+
+def test_a_cell_that_states_its_limit_keeps_it():
+    table = table_of([[0.3, 1.5], [2, 1]], below=[[1, 0], [0, 0]], lower_limit=0.5)
+    assert table.lower_limit.tolist() == [[0.3, 0.5], [0.5, 0.5]]
+
+
+def test_differences_that_agree_to_rounding_have_no_t():
+    first = np.array([1 / 3, 2 / 7, 5 / 9, 1 / 9, 22 / 7])
+    result = rm.paired_t(table_of(np.c_[first, first + 0.1]), *PAIR)
+    assert np.isnan(result.statistic)
+    assert codes(result.notes) == ["no variation"]
+
+
+def test_one_sided_p_beside_two_sided_intervals_is_said():
+    rows = [[10, 10 + x, 10.5 + x] for x in (-1, 2, 3, 4, 5, 6, -2, 8)]
+    family = rm.follow_up(table_of(rows), options={"alternative": "greater"})
+    assert "one-sided" in codes(family.notes)
+
+
+def test_the_normal_approximation_has_the_direction_of_the_test():
+    """Six falls of six: the upper tail is large, the lower small, by every pair test."""
+    table = table_of([[10 + i, 9 - i / 3] for i in range(6)])
+    for test in (rm.signed_rank, rm.sign_test, rm.sign_flip):
+        up = test(table, *PAIR, alternative="greater").details["p_normal"]
+        down = test(table, *PAIR, alternative="less").details["p_normal"]
+        assert down < 0.05 < 0.9 < up
+        assert up + down == pytest.approx(1)

@@ -75,11 +75,14 @@ def test_another_folder_is_never_touched(small: Analysis, tmp_path: Path):
     assert contents(tmp_path) == {"thesis/chapter.txt": b"dear"}
 
 
-def test_a_file_that_others_put_into_a_report_is_not_taken_away(small: Analysis, tmp_path: Path):
+@pytest.mark.parametrize("name", ["figures/my notes.docx", "figures/poster.png", "tables/mine.csv"])
+def test_a_file_that_others_put_into_a_report_is_not_taken_away(
+    small: Analysis, tmp_path: Path, name: str
+):
     target = write_report(small, tmp_path / "report")
-    (target / "figures" / "my notes.docx").write_text("dear")
+    (target / name).write_text("dear")
     before = contents(target)
-    with pytest.raises(ArgumentError, match="which holds figures"):
+    with pytest.raises(ArgumentError, match=f"which holds {name.split('/')[0]}"):
         write_report(small, target)
     assert contents(target) == before
 
