@@ -64,6 +64,14 @@ def check_count(argument: str, value: object, *, least: int = 1) -> int:
     return number
 
 
+def check_share(argument: str, value: float) -> float:
+    """Return a share cut at each end of a sample, in [0, 0.5)."""
+    if isinstance(value, bool) or not 0 <= value < 0.5:
+        hint = f" Did you mean {value / 100:g}?" if 1 <= value < 50 else ""
+        raise ArgumentError(f"`{argument}` must be in [0, 0.5), got {value!r}.{hint}")
+    return float(value)
+
+
 def check_finite(argument: str, value: float) -> float:
     """Return a finite float."""
     if not math.isfinite(value):

@@ -107,18 +107,22 @@ def restyled(text: str, style: Style) -> str:
     return re.sub(r"\bP ([=<]) 0?(\d?\.\d)", r"p \1 \2", text) if style == "apa" else text
 
 
-def statistic_phrase(name: str, df: Sequence[float], value: float | None) -> str:
+def statistic_phrase(name: str, df: Sequence[float | None], value: float | None) -> str:
     """Return a statistic with its degrees of freedom, decimals only where df is not whole.
+
+    None stands for infinitely many, as it does beside a defined statistic in JSON.
 
     Examples
     --------
     >>> statistic_phrase("F", (3, 36), 4.123), statistic_phrase("F", (1.62, 17.8), 4.123)
     ('F(3, 36) = 4.12', 'F(1.62, 17.80) = 4.12')
+    >>> statistic_phrase("F", (1.58, None), 4.123)
+    'F(1.58, ∞) = 4.12'
     >>> statistic_phrase("Q", (), 6.333)
     'Q = 6.33'
     """
     # An epsilon of its lower bound gives whole degrees of freedom but for the last bit.
-    listed = ", ".join(f"{d:.0f}" if round(d, 9) == round(d) else f"{d:.2f}" for d in df)
+    listed = ", ".join("∞" if d is None else df_text(round(d, 9)) for d in df)
     return f"{name}({listed}) = {fixed(value)}" if listed else f"{name} = {fixed(value)}"
 
 
@@ -154,9 +158,11 @@ def df_text(df: float) -> str:
 
     Examples
     --------
-    >>> df_text(3.0), df_text(1.8286)
-    ('3', '1.83')
+    >>> df_text(3.0), df_text(1.8286), df_text(math.inf)
+    ('3', '1.83', '∞')
     """
+    if math.isinf(df):
+        return "∞"
     return f"{df:.0f}" if float(df).is_integer() else f"{df:.2f}"
 
 

@@ -110,6 +110,8 @@ class Estimate(_Record):
     no_change : float or None
         The value that says "no change", such as a half of a probability of a fall. None: 0 on
         the raw scale, 1 on the log scale.
+    notes : tuple of Note
+        What a reader must know of the interval.
     """
 
     name: str
@@ -121,6 +123,7 @@ class Estimate(_Record):
     unit: str | None = None
     scale: Scale = "raw"
     no_change: float | None = None
+    notes: tuple[Note, ...] = ()
 
     @property
     def neutral(self) -> float:
@@ -163,7 +166,9 @@ class Estimate(_Record):
         """Return one unrounded row."""
         import pandas as pd
 
-        return pd.DataFrame([{f.name: getattr(self, f.name) for f in dataclasses.fields(self)}])
+        row = {f.name: getattr(self, f.name) for f in dataclasses.fields(self)}
+        row["notes"] = " ".join(map(str, self.notes))
+        return pd.DataFrame([row])
 
 
 def _exp(value: float) -> float:

@@ -1,4 +1,7 @@
-"""What every method on offer promises, tried on every line of the registry."""
+"""What every method on offer promises, tried on every line of the registry.
+
+Methods of a whole family go through `follow_up`; theirs is in tests/methods/test_rank_sums.py.
+"""
 
 from __future__ import annotations
 
@@ -7,6 +10,7 @@ import inspect
 import json
 import math
 import pickle
+import re
 from pathlib import Path
 
 import numpy as np
@@ -15,12 +19,14 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 import robustrm as rm
-from robustrm.methods.registry import METHODS, Method
+from robustrm.methods import registry
+from robustrm.methods.registry import Method
 from tests.methods.tables import LABELS, PAIR, present, raw, tables
 
 pytestmark = pytest.mark.contract
 
 ROOT = Path(__file__).resolve().parents[1]
+METHODS = [method for method in registry.METHODS if method.kind != "family"]
 OMNIBUS = [method for method in METHODS if method.kind == "omnibus"]
 PAIRS = [method for method in METHODS if method.kind == "pair"]
 # Methods made for missing visits use every row that has two of them.
@@ -30,7 +36,7 @@ each = pytest.mark.parametrize("method", METHODS, ids=lambda m: m.name)
 each_omnibus = pytest.mark.parametrize("method", OMNIBUS, ids=lambda m: m.name)
 each_pair = pytest.mark.parametrize("method", PAIRS, ids=lambda m: m.name)
 each_drawn = pytest.mark.parametrize(
-    "method", [m for m in METHODS if "rng" in m.options], ids=lambda m: m.name
+    "method", [m for m in METHODS if "thresholds" in m.options], ids=lambda m: m.name
 )
 each_directed = pytest.mark.parametrize(
     "method", [m for m in METHODS if "alternative" in m.options], ids=lambda m: m.name
@@ -135,7 +141,7 @@ def test_an_exact_null_counts_its_arrangements_and_a_drawn_one_its_draws(method)
         assert present(result.arrangements) >= 2
         assert (result.draws, result.p_interval) == (None, None)
     else:
-        assert result.null == "parametric"
+        assert result.null in ("parametric", "asymptotic")
 
 
 @each
@@ -194,8 +200,11 @@ def test_a_monotone_transform_moves_no_rank_method(method, rows):
     cubes = call(method, raw(np.power(rows, 3)))
     logs = call(method, raw(rows).log())
     for other in (cubes, logs):
-        assert other.p_value == expected.p_value
-        assert other.statistic == expected.statistic or math.isnan(expected.statistic)
+        for found, wanted in (
+            (other.p_value, expected.p_value),
+            (other.statistic, expected.statistic),
+        ):
+            assert found == wanted or (math.isnan(found) and math.isnan(wanted))
 
 
 @each_omnibus
@@ -265,7 +274,13 @@ def test_monte_carlo_comes_near_the_exact_p(method):
 @each
 @given(rows=tables(n=st.integers(2, 7), k=st.integers(2, 4)))
 def test_p_values_and_intervals_are_in_bounds_on_small_tied_tables(method, rows):
-    check_bounds(call(method, raw(rows)))
+    try:
+        check_bounds(call(method, raw(rows)))
+    except rm.TooFewError as error:
+        # from 2 subjects up, only a method that needs more of them than are there may refuse
+        needed = re.search(r"needs at least (\d+) subjects .*, got (\d+)\.$", str(error))
+        assert needed
+        assert int(needed[2]) == len(rows) < int(needed[1])
 
 
 @each
@@ -282,7 +297,7 @@ def test_one_subject_is_answered_or_refused_in_words(method, rows):
     try:
         check_bounds(call(method, raw(rows)))
     except rm.TooFewError as error:
-        assert "needs at least 2 subjects" in str(error)  # noqa: PT017
+        assert re.search(r"needs at least [2-9] subjects", str(error))  # noqa: PT017
 
 
 @each

@@ -14,15 +14,20 @@ Floats = NDArray[np.float64]
 
 
 def cut(n: int, trim: float) -> int:
-    """Return g = ⌊γn⌋, guarding against 0.2 · 15 = 3.0000000000000004 and its kin."""
-    return int(np.floor(trim * n + 1e-9))
+    """Return g = ⌊γn⌋, guarding against 0.2 · 15 = 3.0000000000000004 and its kin.
+
+    One value is left at least, also where a γ just below a half is taken for a half.
+    """
+    return min(int(np.floor(trim * n + 1e-9)), max(n - 1, 0) // 2)
 
 
 def trimmed_mean(y: Floats, trim: float) -> Floats:
     """Return the trimmed mean of samples (..., n)."""
-    g = cut(y.shape[-1], trim)
+    n = y.shape[-1]
+    g = cut(n, trim)
     ordered = np.sort(y, axis=-1)
-    return np.asarray(ordered[..., g : y.shape[-1] - g].mean(axis=-1))
+    # einsum adds short rows several times as fast as mean(axis=-1), which resampling asks for
+    return np.asarray(np.einsum("...i->...", ordered[..., g : n - g]) / (n - 2 * g))
 
 
 def winsorized(y: Floats, trim: float) -> Floats:

@@ -24,6 +24,7 @@ TITLES = {
     "hommel": "Hommel",
     "bh": "Benjamini-Hochberg",
     "closed": "closed permutation testing",
+    "single-step": "single-step adjustment",
 }
 
 

@@ -142,7 +142,7 @@ def attainable(
         the family), ``n_subjects``, ``adjust``, ``smallest_p`` (NaN where it cannot be found
         within the work budget). An adjusted value is the smallest that any comparison can
         reach when all are at their smallest together. Tests that need a stated order are left
-        out, and so are those with too few subjects.
+        out, and so are those with too few subjects and those whose p is an approximation.
 
     Raises
     ------

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 from zlib import crc32
@@ -17,7 +17,15 @@ from robustrm.errors import ArgumentError, TooFewError
 from robustrm.methods.additive import Rng, complete_rows
 from robustrm.methods.adjusting import TITLES, adjusted
 from robustrm.methods.closed import check_closed, closed_comparison, closed_scores, closed_tests
-from robustrm.methods.registry import ADJUSTMENTS, FAMILIES, METHODS
+from robustrm.methods.rank_sums import family_notes
+from robustrm.methods.registry import (
+    ADJUSTMENTS,
+    FAMILIES,
+    METHODS,
+    SINGLE_STEP_METHODS,
+    Method,
+)
+from robustrm.methods.registry import method as registered
 from robustrm.results import Comparison, FollowUps, Note, TestResult
 from robustrm.table import OccasionTable
 
@@ -29,7 +37,7 @@ def follow_up(
     *,
     method: str = "signed_rank",
     family: str | Sequence[Pair] = "first",
-    adjust: str = "holm",
+    adjust: str | None = None,
     intervals: str = "separate",
     level: float = 0.95,
     null: str = "auto",
@@ -43,17 +51,21 @@ def follow_up(
     table : OccasionTable
         Each pair uses all subjects that have both of its occasions, so n may differ.
     method : str, default "signed_rank"
-        Test for every pair; ``robustrm methods`` lists them.
+        Test for every pair, or a method of a whole family (``"nemenyi"``, ``"conover"``);
+        ``robustrm methods`` lists them.
     family : {"first", "all", "successive"} or list of (earlier, later), default "first"
         Each later occasion against the first, all pairs, each occasion against the one
         before it, or named pairs.
-    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh", "closed"}, default "holm"
-        Adjustment of the p values over the family. ``"closed"`` is closed permutation testing
-        with method ``"sign_flip"`` or ``"aligned_ranks"`` on the rows complete on all
-        occasions; each row says which partition of the occasions gave its p, with Holm beside.
+    adjust : str, optional
+        Adjustment of the p values over the family: ``"none"``, ``"bonferroni"``, ``"holm"``
+        (the default), ``"hochberg"``, ``"hommel"``, ``"bh"`` or ``"closed"``. The last is
+        closed permutation testing with method ``"sign_flip"`` or ``"aligned_ranks"`` on the
+        rows complete on all occasions; each row says which partition of the occasions gave
+        its p, with Holm beside. Methods of a whole family take ``"single-step"`` alone, which
+        is their default: their p values are adjusted over all pairs of occasions.
     intervals : {"separate", "simultaneous"}, default "separate"
         Separate intervals hold `level` each; simultaneous ones hold it together, made at
-        the Bonferroni level.
+        the Bonferroni level. Those of ``"nemenyi"`` and ``"conover"`` are always simultaneous.
     level : float, default 0.95
         Confidence level.
     null : str, default "auto"
@@ -73,8 +85,10 @@ def follow_up(
     Raises
     ------
     ArgumentError
-        When the family, method or an option is not known, or an option is not one that the
-        method takes.
+        When the family, method or an option is not known, or an option or adjustment is not
+        one that the method takes.
+    TooFewError
+        When closed testing or a method of a whole family has too few complete subjects.
 
     Notes
     -----
@@ -113,7 +127,8 @@ def follow_up(
     >>> [(c.second, round(c.p_value, 4), round(c.p_adjusted, 4)) for c in family]
     [('week 6', 0.0625, 0.0625), ('week 12', 0.0312, 0.0625)]
     """
-    check_choice("adjust", adjust, ADJUSTMENTS)
+    own = method in SINGLE_STEP_METHODS
+    adjust = _settled(adjust, method, own=own)
     check_choice("intervals", intervals, ("separate", "simultaneous"))
     check_level(level)
     pairs = declared_pairs(table, family)
@@ -125,7 +140,10 @@ def follow_up(
         "null": null,
     }
     root = _root(rng)
-    if adjust == "closed":
+    if own:
+        intervals = "simultaneous"
+        comparisons, smallest = _whole_family(table, pairs, method, settings, level)
+    elif adjust == "closed":
         comparisons, smallest = _closed_family(table, pairs, method, settings, root)
     else:
         comparisons, smallest = _tested_family(
@@ -140,8 +158,28 @@ def follow_up(
         level=level,
         smallest_p=min(smallest_p(c) for c in comparisons),
         smallest_p_adjusted=min(smallest),
-        notes=_notes(comparisons, adjust, intervals, level),
+        notes=(
+            family_notes(comparisons, level)
+            if own
+            else _notes(comparisons, adjust, intervals, level)
+        ),
     )
+
+
+def _settled(adjust: str | None, method: str, *, own: bool) -> str:
+    """Return the adjustment: that of the method where it has one of its own."""
+    if adjust is None:
+        return "single-step" if own else "holm"
+    check_choice("adjust", adjust, ADJUSTMENTS)
+    if own and adjust != "single-step":
+        raise ArgumentError(
+            f"`adjust` must be 'single-step' with method {method!r}, got {adjust!r}: its p "
+            "values are adjusted over all pairs of occasions. Leave it out."
+        )
+    if adjust == "single-step" and not own:
+        named = " or ".join(map(repr, SINGLE_STEP_METHODS))
+        raise ArgumentError(f"`method` must be {named} with adjust='single-step', got {method!r}.")
+    return adjust
 
 
 def smallest_p(comparison: Comparison) -> float:
@@ -249,13 +287,9 @@ def _tested(
     settings: Mapping[str, Any],
     seed: np.random.SeedSequence,
 ) -> TestResult:
-    known = {entry.name: entry for entry in METHODS if entry.kind == "pair"}
-    entry = known[check_choice("method", method, tuple(known))]
-    # offered to every method, used by those that take them
-    common = {"level", "null", "rng", "thresholds"}
-    for name in settings:
-        if name not in common:
-            check_choice(f"options of {method}", name, entry.options)
+    names = tuple(entry.name for entry in METHODS if entry.kind != "omnibus")
+    entry = registered(check_choice("method", method, names))
+    _check_options(settings, entry)
     taken = {name: value for name, value in settings.items() if name in entry.options}
     if "rng" in entry.options:
         taken["rng"] = seed
@@ -263,6 +297,32 @@ def _tested(
         return entry.load()(table, *pair, **taken)
     except TooFewError as error:
         return _not_estimable(table, pair, method, str(error))
+
+
+def _check_options(settings: Mapping[str, Any], entry: Method) -> None:
+    # offered to every method, used by those that take them
+    common = {"level", "null", "rng", "thresholds"}
+    for name in settings:
+        if name not in common:
+            check_choice(f"options of {entry.name}", name, entry.options)
+
+
+def _whole_family(
+    table: OccasionTable,
+    pairs: Sequence[Pair],
+    method: str,
+    settings: Mapping[str, Any],
+    level: float,
+) -> tuple[tuple[Comparison, ...], list[float]]:
+    """Return what a method of a whole family says of the declared pairs, and its smallest p."""
+    entry = registered(method)
+    _check_options(settings, entry)
+    function: Callable[..., tuple[Comparison, ...]] = getattr(entry.module(), entry.name)
+    comparisons = function(table, pairs, level=level)
+    return comparisons, [
+        float(comparison.result.details.get("smallest_p_adjusted", 0.0))
+        for comparison in comparisons
+    ]
 
 
 def _closed_family(

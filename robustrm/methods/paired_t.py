@@ -102,7 +102,7 @@ def paired_t(
         statistic=t,
         statistic_name="t",
         df=(float(n - 1),),
-        p_value=_p_value(t, n - 1, direction),
+        p_value=t_p_value(t, n - 1, direction),
         null="parametric",
         n_subjects=n,
         n_occasions=2,
@@ -129,7 +129,8 @@ _CONSTANT = Note(
 )
 
 
-def _p_value(t: float, df: int, alternative: Alternative) -> float:
+def t_p_value(t: float, df: int, alternative: Alternative) -> float:
+    """Return the p value of t in one direction or both; NaN where t is not defined."""
     if math.isnan(t):
         return math.nan
     tails = {"greater": -t, "less": t, "two-sided": -abs(t)}

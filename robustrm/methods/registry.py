@@ -14,12 +14,13 @@ from typing import Literal
 
 from robustrm.results import TestResult
 
-Kind = Literal["omnibus", "pair"]
+Kind = Literal["omnibus", "pair", "family"]
 
 FAMILIES = ("first", "all", "successive")
 P_ADJUSTMENTS = ("none", "bonferroni", "holm", "hochberg", "hommel", "bh")
-ADJUSTMENTS = (*P_ADJUSTMENTS, "closed")
+ADJUSTMENTS = (*P_ADJUSTMENTS, "closed", "single-step")
 CLOSED_METHODS = ("sign_flip", "aligned_ranks")
+SINGLE_STEP_METHODS = ("nemenyi", "conover")
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,8 +31,9 @@ class Method:
     ----------
     name : str
         Name of the function, of its file in ``robustrm.methods`` and of its docs page.
-    kind : {"omnibus", "pair"}
-        Whether it compares all occasions or two.
+    kind : {"omnibus", "pair", "family"}
+        Whether it compares all occasions, two, or a whole family of pairs with an adjustment
+        of its own; the last goes through ``follow_up``.
     title : str
         Usual name of the method.
     question : str
@@ -47,6 +49,10 @@ class Method:
         Keyword options that the function takes.
     requires : tuple of str
         Those among them that have no default: a plan cannot name such a method on its own.
+    is_additive : bool
+        Whether the test is a sum of scores with a null distribution on the engine.
+    file : str
+        Its file, where that is not called as the method.
     """
 
     name: str
@@ -58,20 +64,17 @@ class Method:
     exchangeable: bool
     options: tuple[str, ...]
     requires: tuple[str, ...] = ()
+    is_additive: bool = True
+    file: str = ""
 
     def load(self) -> Callable[..., TestResult]:
-        """Return the function."""
+        """Return the function; that of a family gives its comparisons, not one result."""
         function: Callable[..., TestResult] = getattr(self.module(), self.name)
         return function
 
     def module(self) -> ModuleType:
         """Return the file of the method; an additive test has `problem` in it."""
-        return importlib.import_module(f"robustrm.methods.{self.name}")
-
-    @property
-    def is_additive(self) -> bool:
-        """Whether the test is a sum of scores with a null distribution on the engine."""
-        return "null" in self.options
+        return importlib.import_module(f"robustrm.methods.{self.file or self.name}")
 
 
 _ORDERS = "every order of a subject's values over the occasions is equally likely"
@@ -136,7 +139,7 @@ METHODS: tuple[Method, ...] = (
         _ORDERS,
         "values",
         True,
-        ("trim", "substitute", *_NULL),
+        ("winsorize", "substitute", *_NULL),
     ),
     Method(
         "row_flip",
@@ -170,6 +173,39 @@ METHODS: tuple[Method, ...] = (
         ("order",),
     ),
     Method(
+        "trimmed_anova",
+        "omnibus",
+        "Trimmed-mean analysis of variance",
+        "Do the trimmed means of the occasions differ, whatever their spread and correlation?",
+        "the occasions have equal trimmed means",
+        "values",
+        False,
+        ("trim", "substitute", "null", "draws", "rng"),
+        is_additive=False,
+    ),
+    Method(
+        "rank_anova",
+        "omnibus",
+        "Rank ANOVA-type test",
+        "Do the marginal distributions of the occasions differ, whatever their dependence?",
+        "the occasions have equal marginal distributions",
+        "ranks",
+        False,
+        ("level",),
+        is_additive=False,
+    ),
+    Method(
+        "hotelling",
+        "omnibus",
+        "Hotelling's T² test",
+        "Do the occasion means differ, whatever their covariance, under a normal model?",
+        "the occasions have equal means",
+        "values",
+        False,
+        ("substitute",),
+        is_additive=False,
+    ),
+    Method(
         "anova",
         "omnibus",
         "Within-subject analysis of variance",
@@ -178,6 +214,7 @@ METHODS: tuple[Method, ...] = (
         "values",
         False,
         ("substitute",),
+        is_additive=False,
     ),
     Method(
         "signed_rank",
@@ -210,6 +247,39 @@ METHODS: tuple[Method, ...] = (
         ("alternative", "substitute", "level", *_NULL),
     ),
     Method(
+        "trimmed_difference",
+        "pair",
+        "Trimmed-difference test",
+        "Did the trimmed mean of the differences between two occasions move from zero?",
+        "the trimmed mean of the differences is zero",
+        "values",
+        False,
+        ("trim", "alternative", "substitute", "level"),
+        is_additive=False,
+    ),
+    Method(
+        "trimmed_pair",
+        "pair",
+        "Yuen's paired test",
+        "Do the trimmed means of two occasions differ?",
+        "the two occasions have equal trimmed means",
+        "values",
+        False,
+        ("trim", "alternative", "substitute", "level"),
+        is_additive=False,
+    ),
+    Method(
+        "rank_pair",
+        "pair",
+        "Paired Brunner-Munzel test",
+        "Does a value of one occasion tend to exceed one of the other, over all subjects?",
+        "a value of the second occasion is as likely above one of the first as below",
+        "ranks",
+        False,
+        ("alternative", "level", *_NULL),
+        is_additive=False,
+    ),
+    Method(
         "paired_t",
         "pair",
         "Paired t test",
@@ -218,6 +288,31 @@ METHODS: tuple[Method, ...] = (
         "values",
         False,
         ("alternative", "substitute", "level"),
+        is_additive=False,
+    ),
+    Method(
+        "nemenyi",
+        "family",
+        "Nemenyi test",
+        "Which occasions differ in mean rank, judged over all pairs together?",
+        _ORDERS,
+        "ranks",
+        True,
+        ("level",),
+        is_additive=False,
+        file="rank_sums",
+    ),
+    Method(
+        "conover",
+        "family",
+        "Conover test",
+        "Which occasions differ in mean rank over all pairs, given how well the subjects agree?",
+        _ORDERS,
+        "ranks",
+        True,
+        ("level",),
+        is_additive=False,
+        file="rank_sums",
     ),
 )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from robustrm.errors import ArgumentError
+from robustrm._checks import check_share
 from robustrm.kernels.scores import winsorized_scores
 from robustrm.methods.additive import (
     AdditiveProblem,
@@ -22,7 +22,7 @@ from robustrm.table import OccasionTable
 def winsorized_permutation(
     table: OccasionTable,
     *,
-    trim: float = 0.1,
+    winsorize: float = 0.1,
     substitute: str = "half",
     null: str = "auto",
     draws: int | Sequence[int] | None = None,
@@ -35,7 +35,7 @@ def winsorized_permutation(
     ----------
     table : OccasionTable
         The rows complete on all occasions are used, on the table's scale.
-    trim : float, default 0.1
+    winsorize : float, default 0.1
         Share of all nk centred values pulled in at each end, in [0, 0.5).
     substitute : {"half", "root2", "limit"}, default "half"
         What enters for a value below the limit.
@@ -52,12 +52,12 @@ def winsorized_permutation(
     -------
     TestResult
         The within-subject F of the Winsorized values with its permutation p value.
-        ``details`` holds ``p_f``, ``f_df``, ``trim`` and ``smallest_p``.
+        ``details`` holds ``p_f``, ``f_df``, ``winsorize`` and ``smallest_p``.
 
     Raises
     ------
     ArgumentError
-        When `trim` is outside [0, 0.5).
+        When `winsorize` is outside [0, 0.5).
     TooFewError
         Without a complete subject.
     BudgetError
@@ -69,7 +69,7 @@ def winsorized_permutation(
 
     Notes
     -----
-    Of all nk values less their subject's means, the g = ⌊trim · nk⌋ outermost at each end are
+    Of all nk values less their subject's means, the g = ⌊winsorize · nk⌋ outermost at each end are
     pulled in to the next, and all are centred again by subject. The clip points do not depend on
     how a subject's values are arranged over the occasions, so the permutation p value is
     exact. The null is that of exchangeable occasions.
@@ -88,7 +88,7 @@ def winsorized_permutation(
     >>> round(result.p_value, 4), result.null
     (0.0556, 'exact')
     """
-    found = problem(table, trim=trim, substitute=substitute)
+    found = problem(table, winsorize=winsorize, substitute=substitute)
     beside = f_details(found)
     return omnibus_result(
         found,
@@ -96,17 +96,15 @@ def winsorized_permutation(
         method="winsorized_permutation",
         df=beside["f_df"],
         estimand="Winsorized means of the subject-centred values",
-        details={**beside, "trim": trim},
+        details={**beside, "winsorize": winsorize},
     )
 
 
 def problem(
-    table: OccasionTable, *, trim: float = 0.1, substitute: str = "half"
+    table: OccasionTable, *, winsorize: float = 0.1, substitute: str = "half"
 ) -> AdditiveProblem:
     """Return the test on a table: scores are the Winsorized subject-centred values."""
-    if not 0 <= trim < 0.5:
-        hint = f" Did you mean {trim / 100:g}?" if 1 <= trim < 50 else ""
-        raise ArgumentError(f"`trim` must be in [0, 0.5), got {trim!r}.{hint}")
+    check_share("winsorize", winsorize)
     used = complete_rows(table, "The Winsorized permutation test")
-    scores = winsorized_scores(used.substitute(substitute).centred_scores(), trim)
+    scores = winsorized_scores(used.substitute(substitute).centred_scores(), winsorize)
     return f_problem(used, scores)

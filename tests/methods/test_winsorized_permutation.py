@@ -47,21 +47,21 @@ def scores(rows, scale, trim):
 
 @both_scales
 @pytest.mark.property
-@given(rows=TABLES, trim=trims)
+@given(rows=TABLES, winsorize=trims)
 def test_p_equals_the_enumeration_of_all_arrangements(scale, rows, trim):
     values = values_by_sums(scores(rows, scale, trim), spread)
-    check_upper(rm.winsorized_permutation(raw(rows).on_scale(scale), trim=trim), values)
+    check_upper(rm.winsorized_permutation(raw(rows).on_scale(scale), winsorize=trim), values)
 
 
 @both_scales
 @pytest.mark.property
-@given(rows=SMALL, trim=trims)
+@given(rows=SMALL, winsorize=trims)
 def test_p_equals_the_enumeration_with_clip_points_found_anew(scale, rows, trim):
     """The clip points do not depend on the arrangement, which makes the test exact."""
     values = values_by_definition(
         rows, lambda arranged: share_of_variation(clipped(arranged, scale, trim))
     )
-    check_upper(rm.winsorized_permutation(raw(rows).on_scale(scale), trim=trim), values)
+    check_upper(rm.winsorized_permutation(raw(rows).on_scale(scale), winsorize=trim), values)
 
 
 @pytest.mark.slow
@@ -76,19 +76,19 @@ def test_p_equals_the_enumeration_of_five_by_four(scale, name):
 @pytest.mark.reference
 @both_scales
 @pytest.mark.property
-@given(rows=measured(n=st.integers(3, 7), k=st.integers(3, 4)), trim=trims)
+@given(rows=measured(n=st.integers(3, 7), k=st.integers(3, 4)), winsorize=trims)
 def test_statistic_is_f_of_statsmodels_anova_of_the_clipped_values(scale, rows, trim):
     values = np.array(clipped(rows, scale, trim))
     share = share_of_variation(values.tolist())
     assume(1e-6 < share < 1 - 1e-6)
     f, p, df = anova_f(values)
     result = rm.winsorized_permutation(
-        raw(rows).on_scale(scale), trim=trim, null="monte carlo", draws=99, rng=1
+        raw(rows).on_scale(scale), winsorize=trim, null="monte carlo", draws=99, rng=1
     )
     assert result.statistic == pytest.approx(f, rel=1e-10 / min(share, 1 - share) ** 0.5)
     assert result.details["p_f"] == pytest.approx(p, rel=1e-8)
     assert result.df == df
-    assert result.details["trim"] == trim
+    assert result.details["winsorize"] == trim
 
 
 @both_scales
@@ -96,7 +96,7 @@ def test_statistic_is_f_of_statsmodels_anova_of_the_clipped_values(scale, rows, 
 @given(rows=TABLES)
 def test_without_pulling_in_it_is_the_permutation_f_test(scale, rows):
     table = raw(rows).on_scale(scale)
-    found, means = rm.winsorized_permutation(table, trim=0), rm.mean_permutation(table)
+    found, means = rm.winsorized_permutation(table, winsorize=0), rm.mean_permutation(table)
     assert found.p_value == pytest.approx(means.p_value, rel=1e-12)
     assert found.statistic == pytest.approx(means.statistic, rel=1e-9, abs=1e-12, nan_ok=True)
 
@@ -106,17 +106,17 @@ def test_one_wild_value_hides_the_means_but_not_the_winsorized_values():
     rows = np.array([[5, 9, 12], [6, 8, 11], [4, 7, 13], [5, 8, 10], [6, 9, 14], [3, 8, 12]])
     rows[0, 2] = 30_000
     assert rm.mean_permutation(raw(rows)).statistic == pytest.approx(1, abs=0.01)
-    assert rm.winsorized_permutation(raw(rows), trim=0.2).statistic > 10
+    assert rm.winsorized_permutation(raw(rows), winsorize=0.2).statistic > 10
 
 
 @pytest.mark.parametrize(
     ("trim", "message"),
     [
-        (0.5, r"`trim` must be in \[0, 0.5\), got 0.5\."),
-        (-0.1, r"`trim` must be in \[0, 0.5\), got -0.1\."),
-        (10, r"`trim` must be in \[0, 0.5\), got 10\. Did you mean 0.1\?"),
+        (0.5, r"`winsorize` must be in \[0, 0.5\), got 0.5\."),
+        (-0.1, r"`winsorize` must be in \[0, 0.5\), got -0.1\."),
+        (10, r"`winsorize` must be in \[0, 0.5\), got 10\. Did you mean 0.1\?"),
     ],
 )
 def test_an_impossible_share_is_refused(trim, message):
     with pytest.raises(rm.ArgumentError, match=message):
-        rm.winsorized_permutation(raw([[1, 2], [3, 4]]), trim=trim)
+        rm.winsorized_permutation(raw([[1, 2], [3, 4]]), winsorize=trim)

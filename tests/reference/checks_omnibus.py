@@ -52,6 +52,33 @@ ANOVA: dict[str, Callable[[rm.TestResult], Any]] = {
     "mauchly_p": lambda r: r.details["mauchly_p"],
 }
 
+RANK_ANOVA: dict[str, Callable[[rm.TestResult], Any]] = {
+    "rte": lambda r: r.details["relative_effects"],
+    "ATS": lambda r: r.statistic,
+    "df1": lambda r: r.df[0],
+    "p": lambda r: r.p_value,
+    "WTS": lambda r: r.details["wald"],
+    "WTS_df": lambda r: r.details["wald_df"],
+    "WTS_p": lambda r: r.details["p_wald"],
+    # the two sides of the identity with the analysis of variance of the ranks
+    "AnovaRM_F_on_midranks": lambda r: r.statistic,
+    "df1_from_GG": lambda r: r.df[0],
+}
+
+TRIMMED: dict[str, Callable[[rm.TestResult], Any]] = {
+    "tmeans": lambda r: r.details["trimmed_means"],
+    "g": lambda r: r.details["g"],
+    "h": lambda r: r.details["h"],
+    "Qc": lambda r: r.details["qc"],
+    "Qe": lambda r: r.details["qe"],
+    "F": lambda r: r.statistic,
+    "eps_hat": lambda r: r.details["epsilon_box"],
+    "eps_tilde": lambda r: r.details["epsilon_hf"],
+    "df1": lambda r: r.df[0],
+    "df2": lambda r: r.df[1],
+    "p": lambda r: r.p_value,
+}
+
 
 def table_of(name: str) -> rm.OccasionTable:
     """Make the table of a case; ranks serve as values."""
@@ -71,6 +98,12 @@ def friedman(name: str) -> rm.TestResult:
 def anova(name: str) -> rm.TestResult:
     """Within-subject analysis of variance of a case."""
     return rm.anova(table_of(name))
+
+
+@functools.cache
+def trimmed_anova(name: str) -> rm.TestResult:
+    """Analysis of variance of 20% trimmed means of a case."""
+    return rm.trimmed_anova(table_of(name))
 
 
 def of_result(
@@ -225,7 +258,7 @@ def _anova_checks() -> Iterator[Check]:
         yield Check(name, "recomputed.shape", functools.partial(_shape, name))
     phosphate = "phosphate_ogtt_battery"
     yield Check(phosphate, "recomputed.mauchly_statsmodels", functools.partial(_mauchly, phosphate))
-    yield Check(phosphate, "recomputed.trim20/tmeans", _trimmed_means)
+    yield from of_result(phosphate, "recomputed.trim20", trimmed_anova, TRIMMED)
     ergostool = {
         "SS_types": "SS_cond", "SS_subjects": "SS_subj", "SS_error": "SS_err",
         "MS_error": "MS_err", "F": "F", "p": "p",
@@ -274,10 +307,6 @@ def _means(name: str, times: int = 1) -> list[float]:
     return [times * (s.mean or math.nan) for s in summarize(table_of(name))]
 
 
-def _trimmed_means() -> list[float | None]:
-    return [s.trimmed_mean for s in summarize(table_of("phosphate_ogtt_battery"))]
-
-
 def _howell() -> tuple[float, float]:
     """Epsilons from a pooled covariance: N − g degrees of freedom between subjects, g groups."""
     data = case("epsilon_from_covariance_howell").data
@@ -287,4 +316,18 @@ def _howell() -> tuple[float, float]:
     return float(box), float(kernel.epsilon_huynh_feldt(box, data["k"], df, data["g"]))
 
 
-CHECKS = (*_exact_checks(), *_friedman_checks(), *_anova_checks())
+# ── rank ANOVA-type test ──────────────────────────────────────────────────────────────────────
+
+
+@functools.cache
+def rank_anova(name: str) -> rm.TestResult:
+    """Rank ANOVA-type test of a case."""
+    return rm.rank_anova(table_of(name))
+
+
+def _rank_anova_checks() -> Iterator[Check]:
+    yield from of_result("rank_anova_type_identity", "recomputed", rank_anova, RANK_ANOVA)
+    yield from of_result("phosphate_ogtt_battery", "recomputed.ats", rank_anova, RANK_ANOVA)
+
+
+CHECKS = (*_exact_checks(), *_friedman_checks(), *_anova_checks(), *_rank_anova_checks())

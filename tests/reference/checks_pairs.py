@@ -1,17 +1,17 @@
-"""What the signed-rank test finds for the published cases of two occasions."""
+"""What the signed rank and the trimmed means find for the published cases of two occasions."""
 
 from __future__ import annotations
 
 import bisect
 import functools
 import itertools
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
 import numpy as np
 
 import robustrm as rm
-from robustrm.kernels import walsh
+from robustrm.kernels import location, walsh
 from tests.reference.cases import Check, case
 
 # Differences stand on values of about this size; the decimals of the sum stay exact.
@@ -101,11 +101,86 @@ def _poplar() -> Iterator[Check]:
     yield Check(name, "recomputed.HL", lambda: _shift(name).value)
     yield Check(name, "recomputed.ci", lambda: _interval(differences_of(name), 0.95))
     yield Check(name, "recomputed.t", lambda: _poplar_t(name))
+    yield from _yuen(name, "yuen20", 0.2)
 
 
 def _poplar_t(name: str) -> tuple[float, float]:
     result = rm.paired_t(table_of(differences_of(name)), "before", "after")
     return result.statistic, result.p_value
+
+
+# ── trimmed means ─────────────────────────────────────────────────────────────────────────────
+
+YUEN: dict[str, Callable[[rm.TestResult], Any]] = {
+    "tmean_x": lambda r: r.details["trimmed_means"][1],
+    "tmean_y": lambda r: r.details["trimmed_means"][0],
+    "diff": lambda r: r.estimate and r.estimate.value,
+    "se": lambda r: r.details["standard_error"],
+    "t": lambda r: r.statistic,
+    "df": lambda r: r.df[0],
+    "p": lambda r: r.p_value,
+    "ci95": lambda r: r.estimate and [r.estimate.low, r.estimate.high],
+}
+ONE_SAMPLE: dict[str, Callable[[rm.TestResult], Any]] = {
+    "n": lambda r: r.n_subjects,
+    "g": lambda r: r.details["g"],
+    "h": lambda r: r.details["h"],
+    "tmean": lambda r: r.estimate and r.estimate.value,
+    "sw2": lambda r: r.details["winsorized_sd"] ** 2,
+    "se_1m2g": lambda r: r.details["standard_error_nominal"],
+    "se_h": lambda r: r.details["standard_error"],
+    "df": lambda r: r.df[0],
+}
+
+
+@functools.cache
+def trimmed_pair(name: str, trim: float) -> rm.TestResult:
+    """August − November: the case names August x, and the package gives second − first."""
+    data = case(name).data
+    rows = list(zip(data["nov"], data["aug"], strict=True))
+    table = rm.OccasionTable.from_array(rows, occasions=["nov", "aug"])
+    return rm.trimmed_pair(table, "nov", "aug", trim=trim)
+
+
+@functools.cache
+def trimmed_difference(differences: tuple[float, ...]) -> rm.TestResult:
+    """Test of the 20% trimmed mean of some differences."""
+    return rm.trimmed_difference(table_of(differences), "before", "after")
+
+
+def _yuen(name: str, section: str, trim: float) -> Iterator[Check]:
+    for field, read in YUEN.items():
+        find = functools.partial(lambda r: r(trimmed_pair(name, trim)), read)
+        yield Check(name, f"recomputed.{section}/{field}", find)
+
+
+def _one_sample(name: str, data: tuple[float, ...], fields: dict[str, str]) -> Iterator[Check]:
+    for field, ours in fields.items():
+        find = functools.partial(lambda o: ONE_SAMPLE[o](trimmed_difference(data)), ours)
+        yield Check(name, field, find)
+
+
+def _trimmed() -> Iterator[Check]:
+    name, section = "yuen_paired_poplar", "recomputed.one_sample_trimmed_on_differences"
+    yield from _yuen(name, "trim20", 0.2)
+    yield from _yuen(name, "trim0", 0.0)
+    yield Check(name, "recomputed.paired_t", lambda: _poplar_t(name))
+    yield from _one_sample(
+        name, differences_of(name), {f"{section}/{field}": field for field in ONE_SAMPLE}
+    )
+    yield Check(name, f"{section}/wmean", lambda: _winsorized_mean(name))
+    fields = {
+        "published.se": "se_1m2g",
+        "published.df": "df",
+        "recomputed.se_1m2g": "se_1m2g",
+        "recomputed.se_h": "se_h",
+        "recomputed.df": "df",
+    }
+    yield from _one_sample("trimmed_dana20", tuple(case("trimmed_dana20").data["x"]), fields)
+
+
+def _winsorized_mean(name: str) -> float:
+    return float(location.winsorized(np.array(differences_of(name)), 0.2).mean())
 
 
 def _shift(name: str) -> rm.Estimate:
@@ -190,6 +265,7 @@ CHECKS = (
     *_maize(),
     *_zeros(),
     *_poplar(),
+    *_trimmed(),
     *_hodges_lehmann(),
     *_scipy_ten(),
     *_critical_values(),

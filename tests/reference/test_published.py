@@ -11,7 +11,13 @@ from pathlib import Path
 
 import pytest
 
-from tests.reference import checks_additive, checks_omnibus, checks_other, checks_pairs
+from tests.reference import (
+    checks_additive,
+    checks_omnibus,
+    checks_other,
+    checks_pairs,
+    checks_rank_sums,
+)
 from tests.reference.cases import Check, agrees, all_cases, leaves, not_used
 
 pytestmark = pytest.mark.reference
@@ -22,6 +28,7 @@ CHECKS = (
     *checks_additive.CHECKS,
     *checks_pairs.CHECKS,
     *checks_other.CHECKS,
+    *checks_rank_sums.CHECKS,
 )
 
 

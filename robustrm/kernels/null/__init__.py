@@ -14,4 +14,9 @@ quadratic or a linear form of their sum. The rooms, in the order the data pass t
     problem        tables and form together, with what is derived from both
     work           what an exact answer would cost, and which way is cheapest
     engine         the front door: tail, law, draws, smallest_tail
+
+Apart from these, with the same tables, draws and results, stands the one statistic that is neither
+form::
+
+    studentized    a sum divided by its own spread: exact by every pair of half sums
 """

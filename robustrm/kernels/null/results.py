@@ -11,7 +11,9 @@ import numpy as np
 
 from robustrm.kernels.null.tables import Array
 
-How = Literal["sorted sums", "two halves", "convolution", "sorted halves", "monte carlo"]
+How = Literal[
+    "sorted sums", "two halves", "convolution", "sorted halves", "every pair", "monte carlo"
+]
 
 
 @dataclass(frozen=True)
@@ -24,7 +26,8 @@ class Tail:
         NaN if a score is not finite, or if an exact answer was demanded beyond the budget.
     null : {"exact", "monte carlo"}
     how : str
-        Way of counting: "sorted sums", "two halves", "convolution", "sorted halves", "monte carlo".
+        Way of counting: "sorted sums", "two halves", "convolution", "sorted halves", "every pair"
+        (of half sums, see `studentized`), "monte carlo".
     arrangements : int
         Product over the subjects of their arrangements, nothing fixed and nothing merged.
     log_p : float

@@ -74,17 +74,17 @@ def plan_work(tables: Sequence[Table], form: Form, *, budget: float = BUDGET) ->
 
 def cheapest(problem: Problem, budget: float) -> Cost:
     """Compare the exact ways; one that fits in memory goes before one that does not."""
-    return _weigh(min(_ways(problem), key=lambda way: (not way[2], way[1])), budget)
+    return weigh(min(_ways(problem), key=lambda way: (not way[2], way[1])), budget)
 
 
 def cost_of_law(problem: Problem, budget: float) -> Cost | None:
     """Weigh the recursion, which alone gives the whole law; None where it does not apply."""
     if not (problem.is_listable and problem.exact):
         return None
-    return _weigh((recursion_name(problem), *_recursion(problem)), budget)
+    return weigh((recursion_name(problem), *_recursion(problem)), budget)
 
 
-def _weigh(way: Way, budget: float) -> Cost:
+def weigh(way: Way, budget: float) -> Cost:
     """Say whether a way is affordable."""
     how, operations, fits = way
     sentence = f"exact would need about {_short(operations)} operations (budget {_short(budget)})"
