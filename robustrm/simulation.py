@@ -8,8 +8,14 @@ b_i and u_i independent standard normal. The errors e_ij have mean 0 and varianc
 independent, or with serial correlation: e_i0 = z_i0 and e_ij = ρ e_i,j−1 + √(1−ρ²) z_ij, z standard
 by the same law, so that the variance stays 1 and a symmetric law stays symmetric. Where the name
 of the errors begins with "log", the marker is exp(y): shifts are log ratios and the SDs are those
-of the logarithms. With `limit`, the cells of a data set below that quantile of its n·k values are
-set to the quantile and so tied, as values below a limit of detection are.
+of the logarithms. With `stretch`, the value that is recorded is
+
+    stretch_j · (marker_ij − c),
+
+c being the 20% trimmed mean of the law of the marker, the same on every occasion: trimmed means
+are equal, spreads are not, and where the law is skewed neither are the means. With `limit`, the
+cells of a data set below that quantile of its n·k values are set to the quantile and so tied, as
+values below a limit of detection are.
 
 Data sets come in blocks of `BLOCK`, and each block has a stream of its own: what is drawn does not
 depend on how many are asked for at once, in which order or by whom.
@@ -26,6 +32,7 @@ from zlib import crc32
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import special
 
 from robustrm._checks import check_choice, check_count, check_finite
 from robustrm.errors import ArgumentError
@@ -36,6 +43,8 @@ Shape = tuple[int, ...]
 
 # Data sets that share a stream.
 BLOCK = 100
+# Share trimmed at each end, where a law is centred at its trimmed mean.
+TRIM = 0.2
 
 
 def _normal(rng: np.random.Generator, shape: Shape) -> Floats:
@@ -92,6 +101,10 @@ class Design:
         What is added on each occasion; empty for nothing.
     limit : float, default 0.0
         Share of each data set's cells below the limit, in [0, 1).
+    stretch : tuple of float, default ()
+        Factor of each occasion's whole values, subjects' levels included, about their common
+        trimmed mean; empty for none. Asks for occasions that are alike before, and for errors that
+        are symmetric or lognormal.
 
     Raises
     ------
@@ -109,6 +122,7 @@ class Design:
     spread: tuple[float, ...] = ()
     shift: tuple[float, ...] = ()
     limit: float = 0.0
+    stretch: tuple[float, ...] = ()
 
     def __post_init__(self) -> None:
         check_count("n", self.n)
@@ -123,17 +137,36 @@ class Design:
             raise ArgumentError(
                 f"`limit` must be a share of the cells in [0, 1), got {self.limit!r}."
             )
-        for name in ("spread", "shift"):
-            values = getattr(self, name)
-            if len(values) not in (0, self.k):
-                raise ArgumentError(
-                    f"`{name}` must have one number for each of the {self.k} occasions, "
-                    f"got {len(values)}."
-                )
-            if not all(math.isfinite(value) for value in values):
-                raise ArgumentError(f"`{name}` must hold finite numbers, got {values!r}.")
-        if any(value <= 0 for value in self.spread):
-            raise ArgumentError(f"`spread` must hold positive numbers, got {self.spread!r}.")
+        for name in ("spread", "shift", "stretch"):
+            self._check_occasions(name, positive=name != "shift")
+        if self.stretch:
+            self._check_stretch()
+
+    def _check_occasions(self, name: str, *, positive: bool) -> None:
+        """Refuse a list that is not one finite number for each occasion."""
+        values = getattr(self, name)
+        if len(values) not in (0, self.k):
+            raise ArgumentError(
+                f"`{name}` must have one number for each of the {self.k} occasions, "
+                f"got {len(values)}."
+            )
+        if not all(math.isfinite(value) for value in values):
+            raise ArgumentError(f"`{name}` must hold finite numbers, got {values!r}.")
+        if positive and any(value <= 0 for value in values):
+            raise ArgumentError(f"`{name}` must hold positive numbers, got {values!r}.")
+
+    def _check_stretch(self) -> None:
+        """Refuse to stretch where the occasions have no common trimmed mean that is known."""
+        if self.shift or self.spread or self.slope_sd:
+            raise ArgumentError(
+                "`stretch` asks for occasions that are alike before: leave `shift`, `spread` and "
+                f"`slope_sd` at their default, got {self.key}."
+            )
+        if self.errors not in (*SYMMETRIC, "lognormal"):
+            raise ArgumentError(
+                "`stretch` needs the trimmed mean of the law, which is known for "
+                f"{', '.join(SYMMETRIC)} and lognormal errors, got {self.errors!r}."
+            )
 
     @property
     def key(self) -> str:
@@ -156,6 +189,13 @@ class Design:
         return " and ".join(parts) or "exchangeable"
 
     @property
+    def trimmed_centre(self) -> float:
+        """The 20% trimmed mean of the law of one cell, about which `stretch` stretches."""
+        if self.errors in SYMMETRIC:
+            return 0.0
+        return lognormal_trimmed_mean(0.0, math.hypot(self.between_sd, self.within_sd))
+
+    @property
     def equal_centres(self) -> bool:
         """Whether no occasion is shifted against another."""
         return len(set(self.shift)) <= 1
@@ -163,14 +203,24 @@ class Design:
     @property
     def exchangeable(self) -> bool:
         """Whether permuting a subject's values over the occasions leaves their law unchanged."""
-        return (
-            self.equal_centres and not self.rho and not self.slope_sd and len(set(self.spread)) <= 1
-        )
+        unequal = any(len(set(factors)) > 1 for factors in (self.spread, self.stretch))
+        return self.equal_centres and not (unequal or self.rho or self.slope_sd)
 
     @property
     def symmetric(self) -> bool:
         """Whether a subject's contrasts are distributed symmetrically about their centres."""
         return self.errors in SYMMETRIC and not self.limit
+
+
+def lognormal_trimmed_mean(centre: float, sd: float, *, trim: float = TRIM) -> float:
+    """Return the trimmed mean of the law of exp(centre + sd·Z), Z standard normal.
+
+    The mean of exp(centre + sd·Z) over |Z| < q = Φ⁻¹(1 − trim), in closed form: completing the
+    square in ∫ exp(sd·z) φ(z) dz gives exp(sd²/2) [Φ(q − sd) − Φ(−q − sd)].
+    """
+    q = special.ndtri(1 - trim)
+    share = special.ndtr(q - sd) - special.ndtr(-q - sd)
+    return math.exp(centre + sd**2 / 2) * float(share) / (1 - 2 * trim)
 
 
 def stream(root: int, name: str, *spawn: int) -> np.random.Generator:
@@ -203,6 +253,8 @@ def draw_block(design: Design, block: int, *, seed: int) -> Floats:
     values = level + slope * occasion + within * _errors(design, rng) + shift
     if design.errors.startswith("log"):
         values = np.exp(values)
+    if design.stretch:
+        values = np.array(design.stretch) * (values - design.trimmed_centre)
     return _above_limit(values, design.limit) if design.limit else values
 
 

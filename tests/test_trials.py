@@ -182,6 +182,7 @@ def test_rearrangements_are_drawn_anew_for_each_data_set():
         draws=99,
         permutations=np.random.default_rng(1),
         mirrors=np.random.default_rng(2),
+        resamples=np.random.default_rng(3),
         tied=False,
     )
     assert (np.ptp(found, axis=0) > 0).all()

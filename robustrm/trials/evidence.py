@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-import csv
-import dataclasses
-import sys
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Sequence
 from pathlib import Path
 from statistics import fmean
 
 from robustrm._format import counted
+from robustrm.trials import tabulating
 from robustrm.trials.families import FAMILIES
 from robustrm.trials.level import Row, mean_level, z_of
 from robustrm.trials.p_values import PERMUTED, TESTS
@@ -17,43 +15,18 @@ from robustrm.trials.p_values import PERMUTED, TESTS
 CSV, PAGE = "level.csv", "level.md"
 # Subjects from which Holm's procedure on signed ranks can reach .05 in table C.
 ENOUGH = 10
-_READ: dict[str, Callable[[str], object]] = {
-    "int": int,
-    "float": float,
-    "str": str,
-    "bool": lambda text: text == "True",
-    "float | None": lambda text: float(text) if text else None,
-    "bool | None": lambda text: text == "True" if text else None,
-}
 
 
 def write_evidence(rows: Sequence[Row], folder: Path) -> None:
     """Write the CSV and the page."""
     folder.mkdir(parents=True, exist_ok=True)
-    with (folder / CSV).open("w", newline="", encoding="utf-8") as file:
-        writer = csv.writer(file, lineterminator="\n")
-        writer.writerow(field.name for field in dataclasses.fields(Row))
-        writer.writerows(dataclasses.astuple(row) for row in rows)
-    (folder / PAGE).write_text(page(rows, versions()), encoding="utf-8")
+    tabulating.write_csv(rows, folder / CSV)
+    (folder / PAGE).write_text(page(rows, tabulating.versions()), encoding="utf-8")
 
 
 def read_csv(path: Path) -> list[Row]:
     """Read the rows back."""
-    types = {field.name: str(field.type) for field in dataclasses.fields(Row)}
-    with path.open(newline="", encoding="utf-8") as file:
-        return [
-            Row(**{name: _READ[types[name]](text) for name, text in line.items()})  # type: ignore[arg-type]  # the fields' own types
-            for line in csv.DictReader(file)
-        ]
-
-
-def versions() -> str:
-    """Say by which versions the tables were made."""
-    from importlib.metadata import version
-
-    python = ".".join(str(part) for part in sys.version_info[:3])
-    named = [f"{name} {version(name)}" for name in ("robustrm", "numpy", "scipy")]
-    return ", ".join([*named, f"Python {python}"])
+    return tabulating.read_csv(path, Row)
 
 
 def page(rows: Sequence[Row], made_by: str) -> str:
@@ -80,7 +53,7 @@ def page(rows: Sequence[Row], made_by: str) -> str:
         *("## C. All pairs of occasions", _C, _limits(c), _family_table(c)),
         _TAIL,
     ]
-    return "\n\n".join(part.strip() for part in parts) + "\n"
+    return tabulating.joined(parts)
 
 
 def _reading(rows: Sequence[Row]) -> str:
@@ -156,19 +129,17 @@ def _rate(row: Row) -> str:
     return text if row.holds is not False else f"**{text}**"
 
 
-def _line(cells: Iterable[str]) -> str:
-    return f"| {' | '.join(cells)} |"
-
-
 def _level_table(rows: Sequence[Row]) -> str:
     """One line a cell, one column a test, and the mean over the cells that were asked."""
     head = ["errors", "dependence", "n", "k", *(f"`{test}`" for test in TESTS)]
-    lines = [_line(head), _line(["---"] * 2 + ["---:"] * (len(head) - 2))]
+    lines = tabulating.head(head, 2)
     for start in range(0, len(rows), len(TESTS)):
         group = rows[start : start + len(TESTS)]
         errors, dependence, *_ = _cell(group[0])
         lines.append(
-            _line([errors, dependence, str(group[0].n), str(group[0].k), *map(_rate, group)])
+            tabulating.line(
+                [errors, dependence, str(group[0].n), str(group[0].k), *map(_rate, group)]
+            )
         )
     means, bounds = ["mean of the asked", "", "", ""], ["may reach", "", "", ""]
     for test in TESTS:
@@ -176,7 +147,7 @@ def _level_table(rows: Sequence[Row]) -> str:
         mean, bound = mean_level(asked) if asked else (None, None)
         means.append("" if mean is None else f"{mean:.4f}")
         bounds.append("" if bound is None else f"{bound:.4f}")
-    return "\n".join([*lines, _line(means), _line(bounds)])
+    return "\n".join([*lines, tabulating.line(means), tabulating.line(bounds)])
 
 
 def _family_table(rows: Sequence[Row]) -> str:
@@ -185,7 +156,7 @@ def _family_table(rows: Sequence[Row]) -> str:
     head += [f"error, {family}" for family in FAMILIES] + [
         f"power, {family}" for family in FAMILIES
     ]
-    lines = [_line(head), _line(["---"] * 2 + ["---:"] * (len(head) - 2))]
+    lines = tabulating.head(head, 2)
     cells: dict[tuple[str, ...], dict[tuple[str, str], Row]] = {}
     key: tuple[str, ...]
     for row in rows:
@@ -197,7 +168,7 @@ def _family_table(rows: Sequence[Row]) -> str:
             f"{found['power', family].rate:.3f}" if ("power", family) in found else ""
             for family in FAMILIES
         ]
-        lines.append(_line([*key, *errors, *power]))
+        lines.append(tabulating.line([*key, *errors, *power]))
     return "\n".join(lines)
 
 
@@ -262,6 +233,9 @@ _TAIL = """
 Whoever changes a test, the simulation or the shared rearrangements runs the command above and
 commits both files. A test compares the page with the CSV and holds the CSV to its limits; slow
 tests remake two cells to the last count and four from other seeds.
+
+[Location under unequal spread](location.md) has the tests of trimmed means, and what the others do
+beside them. [Coverage](coverage.md) has the intervals.
 
 Simulation shows that a test does what it says in these cells. It does not show that a study meets
 the assumptions.

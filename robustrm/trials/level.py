@@ -42,17 +42,18 @@ class Run:
 
 @dataclass(frozen=True, slots=True)
 class Row:
-    """One rate of one cell of a level table.
+    """One rate of one cell of a level table, or of the table of location.
 
     Parameters
     ----------
     table : str
-        "A", "B" or "C".
+        "A", "B", "C" or "location".
     measure : {"level", "familywise", "power"}
         Share of data sets in which a true null is rejected, in which any of the family's is, or
         mean share of the differing pairs that are found.
     errors, below_limit, n, k, correlation, spread, shift
-        The design; `spread` and `shift` as text, occasion by occasion, empty for equal.
+        The design; `spread` (of the errors, or of the whole values) and `shift` as text, occasion
+        by occasion, empty for equal.
     test : str
         Test, or adjustment and test.
     inside : bool
@@ -162,7 +163,7 @@ def level_rows(table: str, design: Design, run: Run) -> list[Row]:
     """Simulate one cell of table A or B: one row a test, no limits yet."""
     found = p_values(design, TESTS, run.datasets, draws=run.draws, seed=run.seed)
     return [
-        _row(
+        rate_row(
             table,
             "level",
             design,
@@ -187,14 +188,14 @@ def family_rows(design: Design, run: Run) -> list[Row]:
         of_family = replace(run, draws=run.draws if family in CLOSED else 0)
         errors = int(rejected[:, alike].any(axis=1).sum())
         rows.append(
-            _row("C", "familywise", design, family, of_family,
-                 rejections=errors, inside=inside, asked=inside)
+            rate_row("C", "familywise", design, family, of_family,
+                     rejections=errors, inside=inside, asked=inside)
         )  # fmt: skip
         if not alike.all():
             hits, pairs = int(rejected[:, ~alike].sum()), int((~alike).sum())
             rows.append(
-                _row("C", "power", design, family, of_family,
-                     rejections=hits, pairs=pairs, inside=inside, asked=False)
+                rate_row("C", "power", design, family, of_family,
+                         rejections=hits, pairs=pairs, inside=inside, asked=False)
             )  # fmt: skip
     return rows
 
@@ -205,7 +206,7 @@ def _family_inside(family: str, design: Design) -> bool:
     return is_inside("signed_rank", alike) if family == HOLM else alike.exchangeable
 
 
-def _row(
+def rate_row(
     table: str,
     measure: str,
     design: Design,
@@ -217,6 +218,7 @@ def _row(
     asked: bool,
     pairs: int = 1,
 ) -> Row:
+    """Make a row without a limit from the number of rejections."""
     return Row(
         table=table,
         measure=measure,
@@ -225,7 +227,7 @@ def _row(
         n=design.n,
         k=design.k,
         correlation=design.correlation,
-        spread=":".join(f"{value:g}" for value in design.spread),
+        spread=":".join(f"{value:g}" for value in design.spread or design.stretch),
         shift=":".join(f"{value:g}" for value in design.shift),
         test=test,
         inside=inside,

@@ -1,8 +1,9 @@
 """P values of a list of tests on many data sets at once.
 
 The permutation tests of a data set share its rearrangements, which are drawn anew for every data
-set; so do the tests that mirror. Without ties Friedman's test, the signed-rank test and the sign
-test are looked up in their exact law. The pair tests compare the last occasion with the first.
+set; so do the tests that mirror. The bootstrap-t of the trimmed means has resamples of its own.
+Without ties Friedman's test, the signed-rank test and the sign test are looked up in their exact
+law. The pair tests compare the last occasion with the first.
 
 Simulated values are continuous, tied only where they are set to a limit. Equality is therefore that
 of floats; the methods, which see real tables, judge it in whole multiples of the reporting step.
@@ -19,21 +20,22 @@ from numpy.typing import NDArray
 from scipy import special
 
 from robustrm._checks import check_choice, check_count
-from robustrm.kernels import anova, scores
+from robustrm.kernels import anova, hotelling, rank_model, scores, trimmed
+from robustrm.kernels.bootstrap import resampled_rows, rows_in_block
 from robustrm.kernels.null.engine import law
 from robustrm.kernels.null.forms import centring, linear
 from robustrm.kernels.null.results import Law
 from robustrm.kernels.null.shared import shared_flip_p, shared_permutation_p
 from robustrm.kernels.null.tables import permutation_tables, sign_tables
 from robustrm.kernels.score_statistics import between
-from robustrm.simulation import BLOCK, Design, draw_block, stream
+from robustrm.simulation import BLOCK, TRIM, Design, draw_block, stream
 
 Floats = NDArray[np.float64]
 Progress = Callable[[int, int], object]
 
 DRAWS = 999
 # Share Winsorized at each end, the default of the method.
-_TRIM = 0.1
+_WINSORIZED = 0.1
 
 # Tests by permutation within subjects: from values (..., n, k) to scores.
 PERMUTED: dict[str, Callable[[Floats], Floats]] = {
@@ -43,7 +45,7 @@ PERMUTED: dict[str, Callable[[Floats], Floats]] = {
     "normal_scores": scores.normal_scores,
     "mean_permutation": scores.mean_scores,
     "winsorized_permutation": lambda values: scores.winsorized_scores(
-        scores.mean_scores(values), _TRIM
+        scores.mean_scores(values), _WINSORIZED
     ),
 }
 # Tests by mirroring: from values to score vectors (..., n, d).
@@ -56,6 +58,9 @@ MIRRORED: dict[str, Callable[[Floats], Floats]] = {
 OMNIBUS = (*PERMUTED, "row_flip", "anova")
 PAIRS = ("signed_rank", "sign_test", "sign_flip", "paired_t")
 TESTS = (*OMNIBUS, *PAIRS)
+# Overall tests that ask neither for exchangeable occasions nor for a common covariance.
+BOOTSTRAP = "trimmed_anova, bootstrap"
+FURTHER = ("trimmed_anova", BOOTSTRAP, "rank_anova", "hotelling")
 
 
 def p_values(
@@ -73,11 +78,11 @@ def p_values(
     ----------
     design : Design
     tests : sequence of str
-        Among `TESTS`.
+        Among `TESTS` and `FURTHER`.
     datasets : int
         How many data sets.
     draws : int, default 999
-        Rearrangements of each data set.
+        Rearrangements, or resamples, of each data set.
     seed : int
         Root of all streams. Neither the other tests in the list nor the number of data sets
         changes the p value of a test on a data set.
@@ -89,7 +94,7 @@ def p_values(
     ndarray, shape (datasets, len(tests))
     """
     for test in tests:
-        check_choice("tests", test, TESTS)
+        check_choice("tests", test, (*TESTS, *FURTHER))
     check_count("datasets", datasets)
     found = []
     for block in range(math.ceil(datasets / BLOCK)):
@@ -102,6 +107,7 @@ def p_values(
                 draws=draws,
                 permutations=stream(seed, f"permutations: {design.key}", block),
                 mirrors=stream(seed, f"mirrors: {design.key}", block),
+                resamples=stream(seed, f"resamples: {design.key}", block),
                 tied=design.limit > 0,
             )
         )
@@ -117,6 +123,7 @@ def p_values_of(
     draws: int,
     permutations: np.random.Generator,
     mirrors: np.random.Generator,
+    resamples: np.random.Generator,
     tied: bool,
 ) -> Floats:
     """Give the p value of every test on given data sets.
@@ -126,8 +133,8 @@ def p_values_of(
     values : ndarray, shape (B, n, k)
     tests : sequence of str
     draws : int
-    permutations, mirrors : numpy.random.Generator
-        Where the rearrangements come from; each data set takes the next ones.
+    permutations, mirrors, resamples : numpy.random.Generator
+        Where the rearrangements and resamples come from; each data set takes the next ones.
     tied : bool
         Whether values may be tied: then no test is looked up in its untied law.
 
@@ -145,6 +152,8 @@ def p_values_of(
     mirrored = [test for test in tests if test in MIRRORED and test not in found]
     if mirrored:
         found |= dict(zip(mirrored, _mirrored_p(values, mirrored, draws, mirrors), strict=True))
+    if BOOTSTRAP in tests:
+        found[BOOTSTRAP] = bootstrap_t_p(values, draws, resamples)
     return np.stack([found[test] for test in tests], axis=1)
 
 
@@ -155,7 +164,13 @@ def needs_draws(test: str, design: Design) -> bool:
 
 def _looked_up(n: int, k: int, *, tied: bool) -> dict[str, Callable[[Floats], Floats]]:
     """Return the tests whose p values need no rearrangement of the data set."""
-    found: dict[str, Callable[[Floats], Floats]] = {"anova": anova_p, "paired_t": paired_t_p}
+    found: dict[str, Callable[[Floats], Floats]] = {
+        "anova": anova_p,
+        "paired_t": paired_t_p,
+        "trimmed_anova": trimmed_anova_p,
+        "rank_anova": rank_anova_p,
+        "hotelling": hotelling_p,
+    }
     if not tied:
         found |= {"signed_rank": signed_rank_exact, "sign_test": sign_test_exact}
         if _friedman_law(n, k) is not None:
@@ -241,3 +256,35 @@ def paired_t_p(values: Floats) -> Floats:
     with np.errstate(invalid="ignore", divide="ignore"):
         t = change.mean(axis=-1) / (change.std(axis=-1, ddof=1) / math.sqrt(n))
     return np.asarray(2 * special.stdtr(n - 1, -np.abs(t)))
+
+
+def trimmed_anova_p(values: Floats) -> Floats:
+    """Give the p values of the F form of the trimmed-mean analysis of variance, 20% trimmed."""
+    n, k = values.shape[-2:]
+    h = trimmed.left(n, TRIM)
+    _, epsilon = trimmed.trimmed_epsilons(values, TRIM)
+    f = trimmed.trimmed_squares(values, TRIM).f_ratio(h)
+    return anova.f_tail(f, epsilon * (k - 1), epsilon * (k - 1) * (h - 1))
+
+
+def bootstrap_t_p(values: Floats, draws: int, rng: np.random.Generator) -> Floats:
+    """Give the p values (b + 1)/(B + 1) of the bootstrap-t of the same F."""
+    n = values.shape[-2]
+    block = rows_in_block(values[0].size)
+    counts = [
+        trimmed.bootstrap_t_exceedances(each, TRIM, resampled_rows(rng, n, draws, block)).at_least
+        for each in values
+    ]
+    return (np.array(counts) + 1) / (draws + 1)
+
+
+def rank_anova_p(values: Floats) -> Floats:
+    """Give the p values of the ANOVA-type statistic of overall ranks: F on infinite df2."""
+    f, df = rank_model.anova_type(rank_model.overall_midranks(values))
+    return np.asarray(special.chdtrc(df, f * df))
+
+
+def hotelling_p(values: Floats) -> Floats:
+    """Give the p values of Hotelling's T² of the contrasts between the occasions."""
+    n, k = values.shape[-2:]
+    return anova.f_tail(hotelling.to_f(hotelling.t_squared(values), n, k), k - 1, n - k + 1)
