@@ -234,9 +234,10 @@ def test_the_root_of_all_draws_follows_its_stated_order():
 
 
 def test_a_fresh_root_is_recorded():
-    one, other = rm.analyze(TABLE), rm.analyze(TABLE)
+    one, other = (rm.analyze(TABLE, rm.Plan(companions=())) for _ in range(2))
     assert one.record["seed"] != other.record["seed"]
-    assert document(one) == document(other)  # everything here is exact
+    # everything but bootstrap intervals of effect sizes is exact here
+    assert {**document(one), "effects": []} == {**document(other), "effects": []}
 
 
 def test_streams_of_different_methods_are_different_and_fixed():

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import hashlib
 import json
 import os
 import shlex
@@ -97,10 +98,10 @@ def names_of(command: click.Command) -> set[str]:
     return {param.name or "" for param in command.params}
 
 
-def test_every_key_of_the_plan_is_an_option_of_analyze():
-    keys = {field.name for field in dataclasses.fields(Plan)}
+def test_every_key_of_the_plan_but_those_of_the_file_itself_is_an_option_of_analyze():
+    keys = {field.name for field in dataclasses.fields(Plan)} - set(options._OF_THE_FILE)
     assert keys <= names_of(main.commands["analyze"])
-    assert set(options._PLAN_HELP) == keys
+    assert set(options._PLAN_HELP) == keys - set(options._OF_READING)
 
 
 @pytest.mark.parametrize("command", ["check", "analyze"])
@@ -137,13 +138,28 @@ EDITS: list[tuple[list[str], dict]] = [
     (["--design", "randomised-order"], {"design": "randomised-order"}),
     (["--stages", "999,9999"], {"stages": (999, 9999)}),
     (["--seed", "7"], {"seed": 7}),
+    (["--companions", "rank_pair,hotelling"], {"companions": ("rank_pair", "hotelling")}),
+    (["--companions", "none"], {"companions": ()}),
+    (["--missing", "complete"], {"missing": "complete"}),
+    (
+        ["--margin", "1.25", "--margin-reason", "agreed"],
+        {"margin": 1.25, "margin_reason": "agreed"},
+    ),
+    (["--estimand", "the ratio in all"], {"estimand": "the ratio in all"}),
+    (["--trim", "0.1"], {"trim": 0.1}),
+    (["--winsorize", "0.2"], {"winsorize": 0.2}),
+    (["--bootstrap-draws", "999"], {"bootstrap_draws": 999}),
+    (["--marker", "CRP"], {"marker": "CRP"}),
+    (["--unit", "mg/L"], {"unit": "mg/L"}),
+    (["--lower-limit", "0.3"], {"lower_limit": 0.3}),
+    (["--upper-limit", "20,,30"], {"upper_limit": (20.0, None, 30.0)}),
 ]
 
 
 def plan_seen_by_analyze(monkeypatch: pytest.MonkeyPatch, *words: str | Path) -> Plan:
     seen: list[Plan] = []
 
-    def spy(table, plan, *, progress):
+    def spy(table, plan, *, advice, progress):
         seen.append(plan)
         raise KeyboardInterrupt
 
@@ -157,22 +173,103 @@ def plan_seen_by_analyze(monkeypatch: pytest.MonkeyPatch, *words: str | Path) ->
 def test_an_option_changes_its_key_and_no_other(
     words: list[str], changes: dict, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ):
-    data = csv(tmp_path, WIDE)
-    plan = plan_seen_by_analyze(monkeypatch, data, *READ_WIDE, *words)
-    assert plan == Plan(**changes)
-    assert plan != Plan()
+    planned = Plan(occasions=("a", "b", "c"))
+    planned.save(tmp_path / "plan.toml")
+    words = ["--plan", str(tmp_path / "plan.toml"), *words]
+    plan = plan_seen_by_analyze(monkeypatch, csv(tmp_path, WIDE), *READ_WIDE, *words)
+    assert plan == planned.amended(**changes)
+    assert plan != planned
 
 
 def test_every_key_of_the_plan_is_edited_above():
-    edited = {key for _, changes in EDITS for key in changes}
-    assert edited == {field.name for field in dataclasses.fields(Plan)}
+    edited = {key for _, changes in EDITS for key in changes} | {"occasions"}
+    known = {field.name for field in dataclasses.fields(Plan)}
+    assert edited == known - set(options._OF_THE_FILE)
 
 
-def test_an_option_edits_the_plan_of_the_file(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+def test_an_option_amends_the_plan_of_the_file(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
     Plan(adjust="hommel", level=0.9).save(tmp_path / "plan.toml")
     words = ("--plan", tmp_path / "plan.toml", "--level", "0.99")
     plan = plan_seen_by_analyze(monkeypatch, csv(tmp_path, WIDE), *READ_WIDE, *words)
-    assert plan == Plan(adjust="hommel", level=0.99)
+    assert (plan.adjust, plan.level) == ("hommel", 0.99)
+    assert plan.amendments == ("level: 0.9 was planned, 0.99 was used",)
+
+
+def test_a_plan_file_says_how_the_data_are_read(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    planned = Plan(occasions=("a", "c"), marker="CRP", unit="mg/L", lower_limit=2.5)
+    planned.save(tmp_path / "plan.toml")
+    words = ("--subject", "id", "--plan", tmp_path / "plan.toml")
+    tables: list = []
+
+    def spy(table, plan, *, advice, progress):
+        tables.append((table, plan))
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(rm, "analyze", spy)
+    run("analyze", csv(tmp_path, WIDE), *words)
+    table, plan = tables[0]
+    assert (table.occasions, table.marker, table.unit) == (("a", "c"), "CRP", "mg/L")
+    assert table.lower_limit.min() == table.lower_limit.max() == 2.5
+    assert plan == planned
+
+
+def test_without_a_plan_file_the_advice_fills_in_what_no_option_declares(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+):
+    data = csv(tmp_path, WIDE)
+    plan = plan_seen_by_analyze(monkeypatch, data, *READ_WIDE, "--omnibus", "quade")
+    assert (plan.omnibus, plan.scale, plan.pair) == ("quade", "log", "signed_rank")
+    plan = plan_seen_by_analyze(monkeypatch, data, *READ_WIDE, "--marker-kind", "score")
+    assert (plan.omnibus, plan.scale) == ("aligned_ranks", "raw")
+
+
+# ── advice ────────────────────────────────────────────────────────────────────────────────────
+
+
+def test_advice_for_a_design_can_be_saved_and_followed(tmp_path: Path):
+    file = tmp_path / "plan.toml"
+    result = run("advise", "--subjects", "6", "--visits", "3", "--seed", "4", "--save", file)
+    assert result.exit_code == 0, result.output
+    assert "after Holm 0.0625" in result.output  # 2 comparisons, 2 · 2/2⁶, by hand
+    plan = Plan.load(file)
+    assert (plan.omnibus, plan.scale, plan.seed) == ("aligned_ranks", "log", 4)
+    assert plan.created is not None
+    assert plan.data_digest is None
+    done = run("analyze", csv(tmp_path, WIDE), *READ_WIDE, "--plan", file)
+    assert done.exit_code == 0, done.output
+    assert f"the plan was written on {plan.created}, without data" in " ".join(done.output.split())
+
+
+def test_advice_on_data_puts_down_their_digest(tmp_path: Path):
+    data, file = csv(tmp_path, WIDE), tmp_path / "plan.toml"
+    result = run("advise", data, *READ_WIDE, "--save", file, "--statement")
+    assert result.exit_code == 0, result.output
+    assert Plan.load(file).data_digest == hashlib.sha256(data.read_bytes()).hexdigest()
+    assert "The plan in words" in result.output
+    assert "Primary analysis. Planned is" in result.output
+
+
+def test_a_plan_is_not_written_over(tmp_path: Path):
+    file = tmp_path / "plan.toml"
+    file.write_text("dear")
+    result = run("advise", "--subjects", "6", "--visits", "3", "--save", file)
+    assert result.exit_code == 2
+    assert "must name a new file" in result.output
+    assert file.read_text() == "dear"
+
+
+def test_advice_as_json_holds_plan_reasons_and_figures(tmp_path: Path):
+    result = run("advise", csv(tmp_path, WIDE), *READ_WIDE, "--json")
+    held = json.loads(result.stdout)
+    assert held["plan"]["omnibus"] == "aligned_ranks"
+    assert held["figures"]["n_subjects"] == 6
+    assert held["simulated"] is None
+
+
+def test_advice_without_data_or_design_is_refused():
+    result = run("advise")
+    assert result.exit_code == 2
+    assert "needs a table, or" in result.output
 
 
 @pytest.mark.parametrize(
@@ -510,11 +607,14 @@ def test_methods_lists_every_method_with_its_question():
         assert f" {method.name} {method.title} {method.question} Null hypothesis: " in output
 
 
-@pytest.mark.parametrize("name", [method.name for method in METHODS])
-def test_methods_explains_a_method(name: str):
-    result = run("methods", name)
+@pytest.mark.parametrize("method", METHODS, ids=lambda method: method.name)
+def test_methods_explains_a_method(method):
+    result = run("methods", method.name)
     assert result.exit_code == 0
-    assert f"robustrm.{name}(" in result.stdout
+    call = f"robustrm.{method.name}("
+    if method.kind == "family":
+        call = f'robustrm.follow_up(table, method="{method.name}", family='
+    assert call in result.stdout
     assert "Notes\n-----" in result.stdout
 
 
@@ -531,6 +631,18 @@ def test_a_direction_without_one_side_is_refused(tmp_path: Path):
     result = CliRunner().invoke(main, ["analyze", str(path), *options])
     assert result.exit_code == 2
     assert "Add --sides 1" in result.stderr
+
+
+def test_a_method_of_a_whole_family_is_taken_from_the_command_line(tmp_path: Path):
+    path = tmp_path / "a.csv"
+    path.write_text("id,a,b,c\nX,1,2,4\nY,2,3,9\nZ,3,8,7\n", encoding="utf-8")
+    words = ["analyze", str(path), "--subject", "id", "--occasions", "a,b,c", "--pair", "nemenyi"]
+    result = run(*words, "--adjust", "single-step")
+    assert result.exit_code == 0, result.stderr
+    assert "P, single-step" in result.stdout
+    refused = run(*words)
+    assert refused.exit_code == 2
+    assert "`adjust` must be 'single-step' with `pair` 'nemenyi'" in refused.stderr
 
 
 def test_closed_testing_takes_aligned_ranks_from_the_command_line(tmp_path: Path):

@@ -109,8 +109,15 @@ def test_every_key_moves_the_digest():
         "omnibus": "anova", "zeros": "drop", "adjust": "hommel", "intervals": "simultaneous",
         "level": 0.9, "sides": 1, "direction": "less", "substitute": "limit", "in_time": False,
         "purpose": "confirmatory", "design": "randomised-order", "stages": (99,), "seed": 2,
+        "marker": "CRP", "unit": "mg/L", "occasions": ("a", "b"), "lower_limit": 0.3,
+        "upper_limit": (20.0, None), "estimand": "the ratio in all who started",
+        "companions": ("sign_test",), "missing": "complete", "margin": 1.25,
+        "margin_reason": "agreed beforehand", "trim": 0.1, "winsorize": 0.2,
+        "bootstrap_draws": 999, "created": "2026-03-04", "data_digest": "0" * 64,
+        "amendments": ("one",),
     }  # fmt: skip
     assert {f.name for f in dataclasses.fields(rm.Plan)} <= set(changes)
+    plan = plan.replace(margin=2.0, margin_reason="a first guess")
     digests = {plan.replace(**{name: value}).digest for name, value in changes.items()}
     assert len(digests | {plan.digest}) == len(changes) + 1
 
@@ -133,7 +140,7 @@ def test_replacing_leaves_the_plan_as_it_was():
     ("text", "message"),
     [
         ("adjsut = 'holm'", r"The plan has no key 'adjsut'\. Did you mean 'adjust'\?"),
-        ("colour = 'blue'", r"The plan has no key 'colour'\. Keys are: marker_kind, "),
+        ("colour = 'blue'", r"The plan has no key 'colour'\. Keys are: marker, unit, "),
         ("level = 95", r"'p\.toml' is refused: `level` must be in \(0, 1\), got 95\. .* 0\.95\?"),
         ("adjust = 'holn'", r"`adjust` must be one of .* got 'holn'\. Did you mean 'holm'\?"),
         ("contrasts = [['a', 'a']]", "`contrasts` must be one of 'first', 'all', 'successive' or"),
@@ -169,6 +176,13 @@ def test_a_file_that_is_not_there_or_not_text_is_refused(tmp_path):
         ({"contrasts": [("a", "b", "c")]}, "pairs of two different occasions"),
         ({"pair": "friedman"}, "`pair` must be one of 'signed_rank'"),
         ({"pair": "signed_ranks"}, r"Did you mean 'signed_rank'\?"),
+        ({"pair": "nemenyi"}, "`adjust` must be 'single-step' with `pair` 'nemenyi', got 'holm'"),
+        ({"adjust": "single-step"}, "`pair` must be 'nemenyi' or 'conover' with `adjust` 'single"),
+        (
+            {"pair": "conover", "adjust": "single-step", "sides": 1},
+            "`sides` must be 2 with `pair` 'conover', got 1",
+        ),
+        ({"pair": "nemeny"}, r"`pair` must be one of .* Did you mean 'nemenyi'\?"),
         ({"omnibus": "paired_t"}, "`omnibus` must be one of 'friedman'"),
         ({"zeros": "keep"}, "`zeros` must be one of 'pratt', 'drop', got 'keep'"),
         ({"intervals": "joint"}, "`intervals` must be one of"),
@@ -197,3 +211,49 @@ def test_a_value_outside_its_range_is_refused_with_the_rule(changes, message):
 def test_an_unknown_key_is_refused_with_the_nearest():
     with pytest.raises(rm.ArgumentError, match=r"no key 'intervalls'\. Did you mean 'intervals'\?"):
         rm.Plan().replace(intervalls="separate")
+
+
+# ── what was written when, and what was changed afterwards ────────────────────────────────────
+
+
+def test_a_change_of_what_was_planned_is_an_amendment():
+    plan = rm.Plan(adjust="hommel", created="2026-03-04")
+    changed = plan.amended(adjust="none", level=0.95, marker="CRP")
+    assert changed.adjust == "none"
+    # the level is as planned, and the marker was left open: filled in, not changed
+    assert changed.amendments == ("adjust: 'hommel' was planned, 'none' was used",)
+    assert changed.marker == "CRP"
+    assert changed.amended(seed=4).amendments == changed.amendments
+    assert len(changed.amended(trim=0.1).amendments) == 2
+
+
+def test_limits_of_the_occasions_survive_the_file(tmp_path):
+    plan = rm.Plan(occasions=("a", "b", "c"), lower_limit=(0.3, None, 0.5), upper_limit=20)
+    assert plan.lower_limit == (0.3, None, 0.5)
+    plan.save(tmp_path / "plan.toml")
+    assert rm.Plan.load(tmp_path / "plan.toml") == plan
+
+
+@pytest.mark.parametrize(
+    ("keys", "message"),
+    [
+        ({"occasions": ("a", "a")}, "`occasions` must not repeat a name"),
+        ({"occasions": "abc"}, "`occasions` must be a list of names"),
+        ({"lower_limit": "0.3"}, "`lower_limit` must be a number, or one an occasion"),
+        (
+            {"occasions": ("a", "b"), "upper_limit": (1.0,)},
+            "one number for each of the 2 occasions, got 1",
+        ),
+        ({"margin": -1, "margin_reason": "x"}, "`margin` must be a positive number, got -1"),
+        ({"margin": 1.25}, "`margin` needs `margin_reason`"),
+        ({"created": "yesterday"}, "`created` must be a date as text"),
+        ({"data_digest": "abc"}, "`data_digest` must be a SHA-256"),
+        ({"estimand": "  "}, "`estimand` must be a text"),
+        ({"trim": 20}, r"`trim` must be in \[0, 0.5\), got 20\. Did you mean 0.2\?"),
+        ({"companions": ("page_trend",)}, "`companions` must be one of .*got 'page_trend'"),
+        ({"missing": "drop"}, "`missing` must be one of 'available', 'complete'"),
+    ],
+)
+def test_a_key_outside_its_range_is_refused(keys, message):
+    with pytest.raises(rm.ArgumentError, match=message):
+        rm.Plan(**keys)

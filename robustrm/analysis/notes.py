@@ -61,7 +61,7 @@ def _missing_note(table: OccasionTable, plan: Plan) -> Note | None:
         "missing occasions",
         f"{count} of {table.n_subjects} without all occasions: {who}.",
         "Left out of the planned comparisons and of the tests that need all occasions."
-        if plan.adjust == "closed"
+        if plan.adjust in ("closed", "single-step")
         else "Not in the tests that need all occasions; each comparison uses all who have both.",
         "Ask whether the reason for the gap has to do with the value that is missing.",
     )

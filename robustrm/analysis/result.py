@@ -8,10 +8,12 @@ from pathlib import Path
 from typing import Any
 
 from robustrm._format import Style
+from robustrm.advice import Advice
 from robustrm.ledger import Ledger
 from robustrm.methods.attainable import Attainable
 from robustrm.methods.effects import Effect
 from robustrm.methods.null_distribution import NullDistribution
+from robustrm.methods.registry import method as registered
 from robustrm.methods.summary import OccasionSummary
 from robustrm.plan import Plan
 from robustrm.results import FollowUps, Note, Role, Scale, TestResult, plain
@@ -44,6 +46,12 @@ class Row:
     result: TestResult
     p_adjusted: float | None = None
     adjust: str | None = None
+
+    @property
+    def title(self) -> str:
+        """Usual name of the method; one statistic may stand against its bootstrap as well."""
+        title = registered(self.result.method).title
+        return f"{title}, bootstrap" if self.result.null == "bootstrap" else title
 
     def to_dict(self) -> dict[str, Any]:
         """Return plain values."""
@@ -82,6 +90,8 @@ class Analysis:
     ----------
     plan : Plan
         What was fixed beforehand.
+    advice : Advice or None
+        The advice that the plan came from, where it was not given.
     table : OccasionTable
         The data on the raw scale, subjects in natural order.
     scale : {"raw", "log"}
@@ -114,6 +124,7 @@ class Analysis:
     """
 
     plan: Plan
+    advice: Advice | None
     table: OccasionTable
     scale: Scale
     attainable: Attainable

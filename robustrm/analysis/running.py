@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
-import contextlib
 import dataclasses
 import importlib.metadata
 import platform
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 from zlib import crc32
 
 import numpy as np
 
+from robustrm.advice import Advice, advise
 from robustrm.analysis.notes import analysis_notes
 from robustrm.analysis.result import ALL_OCCASIONS, Analysis, Inclusion, Row, Skip
 from robustrm.errors import ArgumentError, DataError, TooFewError
@@ -36,6 +36,7 @@ def analyze(
     table: OccasionTable,
     plan: Plan | None = None,
     *,
+    advice: Advice | None = None,
     rng: np.random.Generator | int | None = None,
     progress: Progress | None = None,
 ) -> Analysis:
@@ -46,7 +47,10 @@ def analyze(
     table : OccasionTable
         The data, on the raw scale.
     plan : Plan, optional
-        What was fixed beforehand; the defaults if not given.
+        What was fixed beforehand. Without one the plan is that of :func:`advise`, which is blind
+        to the occasions; the report says so and gives its reasons.
+    advice : Advice, optional
+        The advice that `plan` came from, for the report.
     rng : Generator or int, optional
         Root of the random streams of Monte Carlo nulls. Default: the plan's seed, else fresh
         entropy, which is recorded.
@@ -85,30 +89,43 @@ def analyze(
     >>> analysis.attainable.smallest_p_adjusted, analysis.attainable.reachable
     (0.0625, False)
     """
-    settled = plan if plan is not None else Plan()
-    _check_kinds(table, settled)
+    _check_kinds(table, plan)
+    if plan is None:
+        advice = advice or advise(table)
+        plan = advice.plan
+    settled = plan
     root = _root(settled, rng)
     raw = table.in_natural_order()
     _check_contrasts(raw, settled)
-    scaled = raw.on_scale(settled.used_scale)
+    kept = raw.complete() if settled.missing == "complete" else raw
+    scaled = kept.on_scale(settled.used_scale)
     steps = _Steps(progress, total=8)
 
     primary = _primary(scaled, settled, root)
     steps.done()
     omnibus, skipped = _omnibus(scaled, settled, root)
     steps.done()
-    companions = _companions(scaled, settled, root)
+    companions, skipped_companions = _companions(scaled, settled, root)
     steps.done()
     null = _null_distribution(scaled, settled, omnibus, root)
     steps.done()
-    beside, skipped_beside = _beside(raw, settled)
+    beside, skipped_beside = _beside(kept, settled)
     steps.done()
-    effects = effect_sizes(scaled, primary, omnibus)
+    effects = effect_sizes(
+        scaled,
+        primary,
+        raw=kept,
+        substitute=settled.substitute,
+        trim=settled.trim,
+        rng=stream(root, "effect sizes"),
+        draws=settled.bootstrap_draws,
+    )
     steps.done()
     summary = summarize(raw, substitute=settled.substitute)
     steps.done()
     analysis = Analysis(
         plan=settled,
+        advice=advice,
         table=raw,
         scale=settled.used_scale,
         attainable=attainable_of(primary),
@@ -120,7 +137,7 @@ def analyze(
         effects=effects,
         summary=summary,
         inclusions=(),
-        skips=(*skipped, *skipped_beside),
+        skips=(*skipped, *skipped_companions, *skipped_beside),
         ledger=scaled.ledger,
         notes=analysis_notes(raw, settled, summary),
         record=_record(raw, settled, root),
@@ -130,7 +147,7 @@ def analyze(
 
 
 def _check_kinds(table: object, plan: object) -> None:
-    if not isinstance(table, OccasionTable) or not isinstance(plan, Plan):
+    if not isinstance(table, OccasionTable) or not isinstance(plan, Plan | None):
         raise ArgumentError(
             f"`table` must be an OccasionTable and `plan` a Plan, got {type(table).__name__} and "
             f"{type(plan).__name__}. Make the table with read_table or OccasionTable.from_wide."
@@ -139,6 +156,12 @@ def _check_kinds(table: object, plan: object) -> None:
 
 def _check_contrasts(table: OccasionTable, plan: Plan) -> None:
     """Refuse unknown occasions, and pairs that run against time, before anything is computed."""
+    if plan.occasions and plan.occasions != table.occasions:
+        raise ArgumentError(
+            f"The plan has the occasions {', '.join(plan.occasions)}, the table "
+            f"{', '.join(table.occasions)}. Read the table with the planned occasions in their "
+            "order, or amend the plan."
+        )
     for first, second in declared_pairs(table, plan.contrasts, "contrasts"):
         if plan.in_time and table.occasions.index(first) > table.occasions.index(second):
             raise ArgumentError(
@@ -208,16 +231,20 @@ def _thresholds(table: OccasionTable, plan: Plan) -> tuple[float, ...]:
 
 def _offered(plan: Plan, name: str, thresholds: Sequence[float], root: int) -> dict[str, Any]:
     """Return what the plan says of the options that a method takes."""
+    entry = registered(name)
     offered = {
         "alternative": plan.alternative,
         "zeros": plan.zeros,
         "substitute": plan.substitute,
+        "trim": plan.trim,
+        "winsorize": plan.winsorize,
         "level": plan.level,
-        "draws": plan.stages,
+        # where draws approach a p value by stages, the method takes the levels it is held against
+        "draws": plan.stages if "thresholds" in entry.options else plan.bootstrap_draws,
         "thresholds": thresholds,
         "rng": stream(root, name),
     }
-    return {key: value for key, value in offered.items() if key in registered(name).options}
+    return {key: value for key, value in offered.items() if key in entry.options}
 
 
 def _omnibus(
@@ -230,41 +257,66 @@ def _omnibus(
         return None, (Skip(f"{entry.title} ({table.scale} scale)", str(error)),)
 
 
-def _overall(table: OccasionTable, plan: Plan, name: str, root: int) -> TestResult:
-    options = _offered(plan, name, (plan.alpha,), root)
-    return registered(name).load()(table, **options)
+def _overall(table: OccasionTable, plan: Plan, name: str, root: int, **options: Any) -> TestResult:
+    offered = _offered(plan, name, (plan.alpha,), root)
+    return registered(name).load()(table, **offered, **options)
 
 
-def _companions(table: OccasionTable, plan: Plan, root: int) -> tuple[Row, ...]:
-    """Return what stands beside the overall test, and the directions of the contrasts.
+def _companions(
+    table: OccasionTable, plan: Plan, root: int
+) -> tuple[tuple[Row, ...], tuple[Skip, ...]]:
+    """Return what stands beside the planned tests, and what could not be made of it.
 
     The row flip does not ask for exchangeable occasions, which occasions in time rarely are;
-    the Skillings-Mack test takes the subjects who lack an occasion.
+    the Skillings-Mack test takes the subjects who lack an occasion. The companions of the plan
+    answer other questions, each with an estimand of its own.
     """
-    names = []
-    if plan.in_time and table.complete().n_subjects >= ROW_FLIP_FROM and plan.omnibus != "row_flip":
-        names.append("row_flip")
+    rows: list[Row] = []
+    skips: list[Skip] = []
+    for role, name, options in _beside_overall(table, plan):
+        try:
+            result = _overall(table, plan, name, root, **options)
+            rows.append(Row(role, ALL_OCCASIONS, result))
+        except TooFewError as error:
+            skips.append(Skip(f"{registered(name).title} ({table.scale} scale)", str(error)))
+    for name in plan.companions:
+        if registered(name).kind == "omnibus" or name == plan.pair:
+            continue
+        try:
+            rows.extend(_other_pairs(table, plan, name, root))
+        except TooFewError as error:  # a method of a whole family needs complete rows
+            skips.append(Skip(f"{registered(name).title} ({table.scale} scale)", str(error)))
+    return tuple(rows), tuple(skips)
+
+
+def _beside_overall(table: OccasionTable, plan: Plan) -> Iterator[tuple[Role, str, dict[str, Any]]]:
+    """Yield role, name and options of every test that stands beside the planned overall test."""
+    n = table.complete().n_subjects
+    if plan.omnibus != "friedman":
+        yield "supporting", "friedman", {}  # what readers of the field look for
+    if plan.in_time and n >= ROW_FLIP_FROM and plan.omnibus != "row_flip":
+        yield "supporting", "row_flip", {}
     if table.missing.any() and plan.omnibus != "skillings_mack":
-        names.append("skillings_mack")
-    rows = []
-    for name in names:
-        with contextlib.suppress(TooFewError):  # too few for a companion is no news
-            rows.append(Row("supporting", ALL_OCCASIONS, _overall(table, plan, name, root)))
-    return (*rows, *_directions(table, plan, root))
+        yield "supporting", "skillings_mack", {}
+    for name in plan.companions:
+        if registered(name).kind != "omnibus" or name == plan.omnibus:
+            continue
+        yield "supplementary", name, {}
+        if name == "trimmed_anova":  # one statistic against both of its null distributions
+            yield "supplementary", name, {"null": "bootstrap"}
 
 
-def _directions(table: OccasionTable, plan: Plan, root: int) -> list[Row]:
-    if plan.pair == "sign_test":
-        return []
+def _other_pairs(table: OccasionTable, plan: Plan, name: str, root: int) -> list[Row]:
+    options = _offered(plan, name, _thresholds(table, plan), root)
     family = follow_up(
         table,
-        method="sign_test",
+        method=name,
         family=plan.contrasts,
-        adjust="holm",
+        adjust=None if registered(name).kind == "family" else "holm",
         intervals=plan.intervals,
         level=plan.level,
-        rng=stream(root, "sign_test"),
-        options={"alternative": plan.alternative},
+        rng=stream(root, name),
+        options={k: v for k, v in options.items() if k not in ("level", "rng")},
     )
     return [Row("supplementary", c.label, c.result, c.p_adjusted, family.adjust) for c in family]
 
@@ -320,7 +372,7 @@ def _inclusions(analysis: Analysis) -> tuple[Inclusion, ...]:
     table = analysis.table
     result: list[Inclusion] = []
     for row in analysis.rows():
-        name = f"{registered(row.result.method).title}, {row.result.scale} scale: {row.label}"
+        name = f"{row.title}, {row.result.scale} scale: {row.label}"
         used = set(row.result.subjects)
         result.extend(
             Inclusion(name, subject, subject in used, "" if subject in used else table.reason(i))

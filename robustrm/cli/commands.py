@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 import inspect
 import io
 import json
@@ -11,18 +12,22 @@ import textwrap
 import typing
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
-from typing import Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import click
 
 import robustrm
 from robustrm._checks import did_you_mean
 from robustrm._format import Style
+from robustrm.advice import Advice
+from robustrm.advice import advise as advise_on
 from robustrm.analysis import Analysis, Progress
 from robustrm.cli.exits import REFUSED, Group, debug_option
 from robustrm.cli.options import (
     PLAN_OPTIONS,
     data_argument,
+    declared_keys,
     plan_file_option,
     plan_of,
     reading_options,
@@ -31,7 +36,12 @@ from robustrm.cli.options import (
 )
 from robustrm.errors import ArgumentError, DataError
 from robustrm.methods.registry import METHODS, Method
+from robustrm.plan import Plan
 from robustrm.report.structure import problems_text, structure, structure_text
+from robustrm.table import OccasionTable
+
+if TYPE_CHECKING:
+    from robustrm.trials.own_design import OwnDesign
 
 _WORDS = "robustrm.words"
 
@@ -115,7 +125,7 @@ def check(
     """
     plan = plan_of(plan_file, options)
     try:
-        table = table_of(data, options)
+        table = table_of(data, options, plan)
         table.on_scale(plan.used_scale)
     except DataError as error:
         if as_json:
@@ -170,14 +180,19 @@ def analyze(
 ) -> None:
     """Analyze one marker of DATA as planned, with the parametric result beside.
 
-    Prints estimates with intervals, p values and who is in which analysis; with --out it
-    also writes the whole report. Options of the plan hold for this call, and the plan that
-    was used is part of the report.
+    Without --plan, what no option declares is advised without looking at the occasions, and
+    the reasons are part of the report; options change a plan file by amendments.
+
+    Prints estimates with intervals, p values and who is in which analysis; with --out it also
+    writes the whole report, the plan that was used included.
     """
     plan = plan_of(plan_file, options)
-    table = table_of(data, options)
+    table = table_of(data, options, plan)
+    # without a plan file the advice fills in what no option declares
+    advice = None if plan_file else advise_on(table, plan=plan, keep=declared_keys(options))
+    used = plan if advice is None else advice.plan
     with _progress(quiet) as progress:
-        analysis = robustrm.analyze(table, plan, progress=progress)
+        analysis = robustrm.analyze(table, used, advice=advice, progress=progress)
     if out is not None:
         from robustrm.report.folder import write_report
 
@@ -196,18 +211,98 @@ def _result_text(analysis: Analysis, style: Style, *, as_json: bool) -> str:
 
 
 @contextmanager
-def _progress(quiet: bool) -> Iterator[Progress | None]:
+def _progress(quiet: bool, label: str = "analyzing") -> Iterator[Progress | None]:
     """Give a callable that draws a bar on stderr, where somebody is looking."""
     if quiet or not sys.stderr.isatty():
         yield None
         return
-    with click.progressbar(length=1, label="analyzing", file=sys.stderr) as bar:
+    with click.progressbar(length=1, label=label, file=sys.stderr) as bar:
 
         def show(done: int, total: int) -> None:
             bar.length = total
             bar.update(done - bar.pos)
 
         yield show
+
+
+@main.command(
+    short_help="Advise a plan, from the design or without looking at the occasions.",
+    epilog=_examples(
+        """
+        robustrm advise --subjects 12 --visits 4 --save plan.toml
+        robustrm advise crp.csv --subject id --occasions "week 0,week 6,week 12"
+        """
+    ),
+)
+@click.argument(
+    "data", type=click.Path(exists=True, dir_okay=False, allow_dash=True), required=False
+)
+@click.option("--subjects", type=int, metavar="N", help="Without data: how many people.")
+@click.option("--visits", type=int, metavar="K", help="Without data: how many occasions.")
+@reading_options
+@together(plan_file_option, *PLAN_OPTIONS.values())
+@click.option(
+    "--save",
+    type=click.Path(dir_okay=False),
+    metavar="FILE",
+    help="Write the advised plan (TOML), with the date and, where there are data, their digest.",
+)
+@click.option("--statement", is_flag=True, help="Print the plan as the statistics section.")
+@click.option("--simulate", is_flag=True, help="Measure level and power at this design.")
+@json_option
+@click.option("--quiet", is_flag=True, help="No progress on stderr.")
+@debug_option
+def advise(
+    data: str | None,
+    subjects: int | None,
+    visits: int | None,
+    plan_file: str | None,
+    save: str | None,
+    statement: bool,
+    simulate: bool,
+    as_json: bool,
+    quiet: bool,
+    **options: Any,
+) -> None:
+    """Advise a plan for a design, or for DATA without looking at the occasions.
+
+    With DATA the advice sees every person's values sorted and which visits are missing, not
+    which value belongs to which occasion: an exact permutation test that it chooses keeps its
+    level. Options declare what is settled already and are kept.
+    """
+    plan = plan_of(plan_file, options)
+    table = None if data is None else table_of(data, options, plan)
+    advice = advise_on(
+        table, n_subjects=subjects, n_occasions=visits, plan=plan, keep=declared_keys(options)
+    )
+    if save is not None:
+        _save_plan(advice.plan, save, table)
+    told = [_simulated(advice, quiet)] if simulate else []
+    if as_json:
+        _echo_json({**advice.to_dict(), "simulated": told[0].to_dict() if told else None})
+        return
+    from robustrm.report.plan_text import statement as in_words
+
+    click.echo("\n\n".join([str(advice), *map(str, told)]))
+    if statement:
+        click.echo(f"\nThe plan in words\n\n{in_words(advice.plan)}", nl=False)
+
+
+def _simulated(advice: Advice, quiet: bool) -> OwnDesign:
+    from robustrm.trials.own_design import simulate_own_design
+
+    with _progress(quiet, "simulating") as progress:
+        return simulate_own_design(advice.facts, progress=progress)
+
+
+def _save_plan(plan: Plan, file: str, table: OccasionTable | None) -> None:
+    """Write a plan with the date and the digest of what was at hand; never over another file."""
+    if Path(file).exists():
+        raise ArgumentError(f"`--save` must name a new file, got {file!r}, which exists.")
+    digest = None if table is None else table.source.get("sha256")
+    dated = plan.replace(created=dt.datetime.now(tz=dt.UTC).date().isoformat(), data_digest=digest)
+    dated.save(file)
+    click.echo(f"Plan: {file}", err=True)
 
 
 @main.command(
@@ -244,7 +339,14 @@ def methods(name: str | None) -> None:
         )
     entry, function = entries[name], entries[name].load()
     click.echo(f"{entry.title}\n{entry.question}\n")
-    click.echo(f"robustrm.{name}{_plain_signature(function)}\n\n{inspect.getdoc(function)}")
+    click.echo(f"{_call(entry, function)}\n\n{inspect.getdoc(function)}")
+
+
+def _call(entry: Method, function: Callable[..., Any]) -> str:
+    if entry.kind == "family":  # called by follow_up, not by the user
+        options = "".join(f", {name}=..." for name in entry.options)
+        return f'robustrm.follow_up(table, method="{entry.name}", family=...{options})'
+    return f"robustrm.{entry.name}{_plain_signature(function)}"
 
 
 def _plain_signature(function: Callable[..., Any]) -> inspect.Signature:
@@ -254,7 +356,11 @@ def _plain_signature(function: Callable[..., Any]) -> inspect.Signature:
     return signature.replace(parameters=bare, return_annotation=signature.empty)
 
 
-_KINDS = {"omnibus": "All occasions at once", "pair": "Two occasions"}
+_KINDS = {
+    "omnibus": "All occasions at once",
+    "pair": "Two occasions",
+    "family": "All pairs of occasions together, with their own adjustment",
+}
 
 
 def _kind_text(kind: str, title: str) -> str:

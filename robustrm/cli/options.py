@@ -137,13 +137,27 @@ reading_options = together(
 _READING = tuple(name for name in inspect.signature(read_table).parameters if name != "path")
 
 
-def table_of(data: str, options: Mapping[str, Any]) -> OccasionTable:
-    """Return the table that the reading options make of a file, or of standard input (``-``)."""
+def table_of(data: str, options: Mapping[str, Any], plan: Plan) -> OccasionTable:
+    """Return the table that the reading options make of a file, or of standard input (``-``).
+
+    What the plan says of marker, unit, occasions and limits holds where no option does.
+    """
     reading = {name: options[name] for name in _READING}
-    reading["occasions"] = _label_list(reading["occasions"])
-    reading["order"] = _label_list(reading["order"])
+    # long data have the occasions in a column, and their order apart
+    labels = "order" if reading["occasion"] is not None else "occasions"
+    for name in ("occasions", "order"):
+        reading[name] = _label_list(reading[name])
+    for name in ("marker", "unit", "lower_limit", "upper_limit"):
+        if reading[name] is None:
+            reading[name] = _listed(getattr(plan, name))
+    if reading[labels] is None:
+        reading[labels] = list(plan.occasions) or None
     reading["where"] = dict(reading["where"]) or None
     return read_table(sys.stdin.buffer if data == "-" else data, **reading)
+
+
+def _listed(value: Any) -> Any:
+    return list(value) if isinstance(value, tuple) else value
 
 
 # ── editing a plan ────────────────────────────────────────────────────────────────────
@@ -156,6 +170,8 @@ _PLAN_HELP = MappingProxyType(
         "successive ones, or a pair EARLIER,LATER (repeat it for more pairs).",
         "pair": "Method for each comparison; robustrm methods lists them.",
         "omnibus": "Method for the overall test; robustrm methods lists them.",
+        "companions": "Methods shown beside the planned ones, such as trimmed_anova,rank_pair; "
+        "none for the parametric ones alone.",
         "zeros": "What the signed-rank test does with zero differences.",
         "adjust": "Adjustment of the p values over the planned comparisons.",
         "intervals": "Whether intervals hold their level each alone or all together.",
@@ -163,16 +179,34 @@ _PLAN_HELP = MappingProxyType(
         "sides": "Sides of the tests.",
         "direction": "Direction of one-sided tests: later value larger, or smaller.",
         "substitute": "What enters an estimate for a value below the limit.",
+        "missing": "Whether a comparison uses all who have both occasions, or complete subjects.",
+        "margin": "What counts as no relevant change: a ratio such as 1.25, or a difference.",
+        "margin_reason": "Where the margin comes from.",
+        "estimand": "Target of estimation, in the words of the protocol.",
+        "trim": "Share cut at each end by the trimmed means.",
+        "winsorize": "Share pulled in at each end by the Winsorized permutation test.",
         "in_time": "Whether the occasions follow each other in time.",
         "purpose": "In an exploratory study p values are labelled so.",
         "design": "Design of the study; it decides the wording.",
         "stages": "Monte Carlo draws, raised stage by stage, such as 9999,99999.",
+        "bootstrap_draws": "Bootstrap resamples.",
         "seed": "Root of all random draws.",
     }
 )
 _METAVARS = MappingProxyType(
-    {"contrasts": "first|all|successive|A,B", "pair": "NAME", "omnibus": "NAME", "stages": "N,N"}
+    {
+        "contrasts": "first|all|successive|A,B",
+        "pair": "NAME",
+        "omnibus": "NAME",
+        "companions": "NAME,NAME",
+        "stages": "N,N",
+        "margin_reason": "TEXT",
+        "estimand": "TEXT",
+    }
 )
+# Told by the options that read a file, or by the plan file alone.
+_OF_READING = ("marker", "unit", "occasions", "lower_limit", "upper_limit")
+_OF_THE_FILE = ("created", "data_digest", "amendments")
 
 
 def _plan_option(field: dataclasses.Field[Any]) -> Decorator:
@@ -200,13 +234,16 @@ def _usual(default: Any) -> str:
 def _plan_type(name: str) -> Any:
     """Return the type of an option, as the plan declares its key."""
     if name == "pair":
-        return click.Choice(tuple(dict.fromkeys((*methods_for(name), *CLOSED_METHODS))))
+        names = (*methods_for(name), *methods_for("family"), *CLOSED_METHODS)
+        return click.Choice(tuple(dict.fromkeys(names)))
     if name == "omnibus":
         return click.Choice(methods_for(name))
     if name == "adjust":
         return click.Choice(ADJUSTMENTS)
-    if name in ("contrasts", "stages"):
-        return _labels if name == "contrasts" else _whole_numbers
+    if name in ("contrasts", "companions"):
+        return _labels
+    if name == "stages":
+        return _whole_numbers
     declared = typing.get_type_hints(Plan)[name]
     for part in (declared, *typing.get_args(declared)):
         if typing.get_origin(part) is typing.Literal:
@@ -215,7 +252,11 @@ def _plan_type(name: str) -> Any:
 
 
 PLAN_OPTIONS = MappingProxyType(
-    {field.name: _plan_option(field) for field in dataclasses.fields(Plan)}
+    {
+        field.name: _plan_option(field)
+        for field in dataclasses.fields(Plan)
+        if field.name not in (*_OF_READING, *_OF_THE_FILE)
+    }
 )
 
 plan_file_option = click.option(
@@ -227,16 +268,30 @@ plan_file_option = click.option(
 )
 
 
+def declared_keys(options: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the keys of the plan that options declare, with their values."""
+    keys = {key: options[key] for key in PLAN_OPTIONS if options.get(key) not in (None, ())}
+    if "contrasts" in keys:
+        keys["contrasts"] = _family(keys["contrasts"])
+    if keys.get("companions") == ("none",):
+        keys["companions"] = ()
+    labels = _label_list(options.get("occasions") or options.get("order") or ())
+    if labels is not None:
+        keys["occasions"] = tuple(labels)
+    for name in ("marker", "unit", "lower_limit", "upper_limit"):
+        if options.get(name) is not None:
+            value = options[name]
+            keys[name] = tuple(value) if isinstance(value, list) else value
+    return keys
+
+
 def plan_of(plan_file: str | None, options: Mapping[str, Any]) -> Plan:
-    """Return the plan of a file, or the usual one, with the keys changed that were given."""
-    plan = Plan() if plan_file is None else Plan.load(plan_file)
-    changes = {key: options[key] for key in PLAN_OPTIONS if options.get(key) not in (None, ())}
-    if "contrasts" in changes:
-        changes["contrasts"] = _family(changes["contrasts"])
-    plan = plan.replace(**changes)
-    if "direction" in changes and plan.sides == 2:
+    """Return the usual plan with the keys that options declare, or that of a file, amended."""
+    keys = declared_keys(options)
+    plan = Plan(**keys) if plan_file is None else Plan.load(plan_file).amended(**keys)
+    if "direction" in keys and plan.sides == 2:
         raise ArgumentError(
-            f"`--direction` is for one-sided tests, got {changes['direction']!r} with two sides. "
+            f"`--direction` is for one-sided tests, got {keys['direction']!r} with two sides. "
             "Add --sides 1, or leave the direction out."
         )
     return plan

@@ -4,30 +4,45 @@ Every function draws on the axes it is given, or makes a figure of its own, and 
 axes. Matplotlib is loaded with this room and nowhere else.
 """
 
+from robustrm.figures.agreement import agreement
 from robustrm.figures.changes import paired_changes, paired_figure
 from robustrm.figures.describing import (
+    describe_agreement,
+    describe_centred_quantiles,
     describe_changes,
     describe_comparisons,
+    describe_difference_symmetry,
     describe_null,
+    describe_spread_level,
     describe_trajectories,
 )
+from robustrm.figures.diagnostics import centred_quantiles, spread_level
 from robustrm.figures.intervals import comparisons
 from robustrm.figures.lines import trajectories
 from robustrm.figures.nulls import null_law
 from robustrm.figures.picture import Picture, pictures
 from robustrm.figures.saving import figure_bytes
+from robustrm.figures.symmetry import difference_symmetry
 
 __all__ = [
     "Picture",
+    "agreement",
+    "centred_quantiles",
     "comparisons",
+    "describe_agreement",
+    "describe_centred_quantiles",
     "describe_changes",
     "describe_comparisons",
+    "describe_difference_symmetry",
     "describe_null",
+    "describe_spread_level",
     "describe_trajectories",
+    "difference_symmetry",
     "figure_bytes",
     "null_law",
     "paired_changes",
     "paired_figure",
     "pictures",
+    "spread_level",
     "trajectories",
 ]

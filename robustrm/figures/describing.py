@@ -5,14 +5,20 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-from robustrm._format import counted, level_text, listing, number, p_phrase, span
+import numpy as np
+
+from robustrm._format import counted, fixed, level_text, listing, number, p_phrase, span
+from robustrm.figures.agreement import Panel
 from robustrm.figures.changes import changes_of
+from robustrm.figures.diagnostics import centred_notes, centred_of, spread_notes, spread_of
 from robustrm.figures.labels import one_line, with_unit
+from robustrm.figures.symmetry import mirrored_note, mirrored_of
 from robustrm.methods.adjusting import TITLES
 from robustrm.methods.null_distribution import NullDistribution
 from robustrm.methods.summary import OccasionSummary
-from robustrm.results import Comparison, Estimate, FollowUps, TestResult
+from robustrm.results import Comparison, Estimate, FollowUps, Scale, TestResult
 from robustrm.table import OccasionTable
+from robustrm.ties import MERGE
 
 
 def describe_trajectories(
@@ -74,6 +80,19 @@ def describe_comparisons(follow_ups: FollowUps) -> str:
     )
 
 
+def describe_agreement(label: str, shown: Sequence[Panel]) -> str:
+    """Say in words what :func:`agreement` draws."""
+    parts = []
+    for name, rows in shown:
+        told = [
+            f"{row.title} (n = {row.result.n_subjects}) "
+            f"{_estimate_words(row.result.estimate)}, {_p_words(row.result.p_value)}"
+            for row in rows
+        ]
+        parts.append(f"{name}: {'; '.join(told)}.")
+    return one_line(f"{label} by every method, one panel an estimand. {' '.join(parts)}")
+
+
 def describe_null(title: str, null: NullDistribution, result: TestResult) -> str:
     """Say in words what :func:`null_law` draws."""
     how = (
@@ -85,6 +104,70 @@ def describe_null(title: str, null: NullDistribution, result: TestResult) -> str
         f"Null distribution of {null.statistic_name} of the {title}, {how}: observed value "
         f"{number(null.observed, 4)}, n = {result.n_subjects}, {p_phrase(result.p_value)}."
     )
+
+
+def describe_spread_level(table: OccasionTable) -> str:
+    """Say in words what :func:`spread_level` draws; no identifier is named."""
+    found = spread_of(table)
+    head, *left_out = spread_notes(found)
+    slope = ""
+    if not math.isnan(found.slope):
+        slope = f", slope {fixed(found.slope, 2)} (1: in proportion to the level, 0: not at all)"
+    parts = [
+        f"Spread of {with_unit(table.marker, table.unit)} within subjects against their median, "
+        f"one point a subject, blind to the occasions: {head}{slope}.",
+        *(f"{line}." for line in left_out),
+        _limit_words(int(found.limited.sum()), "subject", "with a value beyond a limit"),
+    ]
+    return one_line(" ".join(parts))
+
+
+def describe_centred_quantiles(table: OccasionTable, *, scale: Scale = "log") -> str:
+    """Say in words what :func:`centred_quantiles` draws; no identifier is named."""
+    found = centred_of(table, scale)
+    mean = (
+        "divided by their subject's geometric mean"
+        if scale == "log"
+        else ("less their subject's mean")
+    )
+    beyond = int((found.below | found.above).sum())
+    parts = [
+        f"Normal quantile plot of the values of {table.marker} {mean}, pooled, blind to the "
+        f"occasions: {', '.join(centred_notes(found))}.",
+        _limit_words(beyond, "value", "beyond a limit"),
+    ]
+    return one_line(" ".join(parts))
+
+
+def describe_difference_symmetry(
+    table: OccasionTable,
+    first: str,
+    second: str,
+    *,
+    scale: Scale = "log",
+    substitute: str = "half",
+) -> str:
+    """Say in words what :func:`difference_symmetry` draws; no identifier is named."""
+    found = mirrored_of(table, first, second, scale, substitute)
+    gaps = found.above - found.below
+    gaps[np.abs(gaps) <= MERGE * np.max(found.above + found.below, initial=0.0)] = 0.0
+    higher, lower = int((gaps > 0).sum()), int((gaps < 0).sum())
+    what, sign = ("ratios", "/") if scale == "log" else ("differences", "−")
+    parts = [
+        f"Symmetry of the {what} of {table.marker}, {second} {sign} {first}, shown, not used to "
+        f"choose: {mirrored_note(found)}.",
+        f"Of {counted(gaps.size, 'pair')} of an upper and a lower one, the upper lies further from "
+        f"the median in {higher}, the lower in {lower}."
+        if gaps.size
+        else "",
+        _limit_words(int(found.limited.sum()), "pair", "with a value beyond a limit"),
+    ]
+    return one_line(" ".join(parts))
+
+
+def _limit_words(count: int, noun: str, what: str) -> str:
+    symbols = "open symbol" if count == 1 else "open symbols"
+    return f"{counted(count, noun)} {what}: {symbols}." if count else ""
 
 
 def _occasion_words(table: OccasionTable, j: int, median: float | None) -> str:

@@ -11,6 +11,7 @@ from matplotlib.figure import Figure
 
 from robustrm.analysis import Analysis
 from robustrm.figures import describing
+from robustrm.figures.agreement import agreement, panels
 from robustrm.figures.changes import paired_figure
 from robustrm.figures.intervals import comparisons
 from robustrm.figures.labels import one_line
@@ -91,6 +92,15 @@ def _drawn(analysis: Analysis) -> Iterator[Picture]:
         alt=describing.describe_comparisons(primary),
         figure=_figure_of(comparisons(primary)),
     )
+    for index, comparison in enumerate(primary, start=1):
+        rows = [row for row in analysis.rows() if row.label == comparison.label]
+        if len(panels(rows)) > 1:
+            yield Picture(
+                name=f"methods-{index}",
+                title=one_line(f"{table.marker}: {comparison.label}, by every method"),
+                alt=describing.describe_agreement(comparison.label, panels(rows)),
+                figure=agreement(rows),
+            )
     null = analysis.null_distribution
     if null is not None and analysis.omnibus is not None:
         title = registered(null.method).title

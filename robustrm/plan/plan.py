@@ -8,21 +8,56 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
+import math
 import os
 import tomllib
 import types
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal, Self, cast
+from typing import Any, Literal, Self
 
-from robustrm._checks import STAGES, check_choice, check_draws, check_level, nearest
+from robustrm._checks import (
+    STAGES,
+    check_choice,
+    check_count,
+    check_draws,
+    check_level,
+    check_share,
+    nearest,
+)
 from robustrm.errors import ArgumentError, PlanError
-from robustrm.methods.registry import ADJUSTMENTS, CLOSED_METHODS, FAMILIES, METHODS
+from robustrm.methods.registry import ADJUSTMENTS
+from robustrm.plan.checking import (
+    Family,
+    Limit,
+    check_created,
+    check_digest,
+    check_margin,
+    check_pair,
+    check_seed,
+    check_text,
+    checked_companions,
+    checked_family,
+    checked_limit,
+    checked_occasions,
+    methods_for,
+)
 from robustrm.results import Scale
 
 MarkerKind = Literal["concentration", "count", "score"]
-Family = Literal["first", "all", "successive"] | tuple[tuple[str, str], ...]
+COMPANIONS = (
+    "trimmed_anova",
+    "rank_anova",
+    "hotelling",
+    "sign_test",
+    "trimmed_difference",
+    "trimmed_pair",
+    "rank_pair",
+    "nemenyi",
+    "conover",
+)
+"""What stands beside the planned tests unless a plan says otherwise."""
 
 _CHOICES: Mapping[str, tuple[str, ...]] = types.MappingProxyType(
     {
@@ -31,6 +66,7 @@ _CHOICES: Mapping[str, tuple[str, ...]] = types.MappingProxyType(
         "adjust": ADJUSTMENTS,
         "intervals": ("separate", "simultaneous"),
         "substitute": ("half", "root2", "limit"),
+        "missing": ("available", "complete"),
         "purpose": ("exploratory", "confirmatory"),
         "design": ("single-arm", "randomised-order"),
     }
@@ -43,6 +79,14 @@ class Plan:
 
     Parameters
     ----------
+    marker, unit : str or None
+        What is measured, and in which unit.
+    occasions : tuple of str
+        The occasions in their order; empty takes those of the file.
+    lower_limit, upper_limit : float, tuple of (float or None), or None
+        Limits of detection: one number, or one an occasion.
+    estimand : str or None
+        The target of estimation in the words of the protocol.
     marker_kind : {"concentration", "count", "score"}
         A concentration is analyzed as ratios on the log scale, counts and scores raw.
     scale : {"raw", "log"} or None
@@ -51,14 +95,17 @@ class Plan:
         Primary family: each later occasion against the first, all pairs, each occasion
         against the one before, or named pairs (earlier, later).
     pair : str
-        Method for each comparison.
+        Method for each comparison, or for all of them together.
     omnibus : str
         Method for the overall test, which supports the planned contrasts.
+    companions : tuple of str
+        Methods whose results stand beside the planned ones, each with its own estimand; the
+        parametric results always do.
     zeros : {"pratt", "drop"}
         What the signed-rank test does with zero differences.
-    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh", "closed"}
+    adjust : {"none", "bonferroni", "holm", "hochberg", "hommel", "bh", "closed", "single-step"}
         Adjustment of the p values over the family; ``"closed"`` takes `pair` ``"sign_flip"``
-        or ``"aligned_ranks"``.
+        or ``"aligned_ranks"``, ``"single-step"`` takes ``"nemenyi"`` or ``"conover"``.
     intervals : {"separate", "simultaneous"}
         Whether intervals hold the level each alone or all together.
     level : float
@@ -69,6 +116,18 @@ class Plan:
         Direction of one-sided tests: second occasion larger, or smaller.
     substitute : {"half", "root2", "limit"}
         What enters an estimate for a value below the limit; the range is shown beside.
+    missing : {"available", "complete"}
+        Whether a comparison uses all subjects who have both of its occasions, or those with
+        every occasion.
+    margin : float or None
+        What counts as no relevant change: a ratio such as 1.25 on the log scale, a difference
+        on the raw one.
+    margin_reason : str or None
+        Where the margin comes from; needed with one.
+    trim : float
+        Share cut at each end by the trimmed means, in [0, 0.5).
+    winsorize : float
+        Share pulled in at each end by the Winsorized permutation test, in [0, 0.5).
     in_time : bool
         Whether the occasions are ordered in time; the row flip then stands beside the overall
         test, from 8 complete subjects.
@@ -78,8 +137,17 @@ class Plan:
         Decides the wording: a single-arm change gets no causal verb.
     stages : tuple of int
         Monte Carlo draws, raised stage by stage while a p value is not resolved.
+    bootstrap_draws : int
+        Bootstrap resamples.
     seed : int or None
         Root of all random streams; None draws one and records it.
+    created : str or None
+        Date of writing, as the file says: its word, and no proof.
+    data_digest : str or None
+        SHA-256 of the data file that was at hand when the plan was written; None says that it
+        was written without data.
+    amendments : tuple of str
+        What was changed after the plan was written, in words.
 
     Raises
     ------
@@ -93,11 +161,18 @@ class Plan:
     ('all', 'hommel', 'log')
     """
 
+    marker: str | None = None
+    unit: str | None = None
+    occasions: tuple[str, ...] = ()
+    lower_limit: Limit | None = None
+    upper_limit: Limit | None = None
+    estimand: str | None = None
     marker_kind: MarkerKind = "concentration"
     scale: Scale | None = None
     contrasts: Family = "first"
     pair: str = "signed_rank"
     omnibus: str = "friedman"
+    companions: tuple[str, ...] = COMPANIONS
     zeros: Literal["pratt", "drop"] = "pratt"
     adjust: str = "holm"
     intervals: Literal["separate", "simultaneous"] = "separate"
@@ -105,11 +180,20 @@ class Plan:
     sides: Literal[1, 2] = 2
     direction: Literal["greater", "less"] = "greater"
     substitute: Literal["half", "root2", "limit"] = "half"
+    missing: Literal["available", "complete"] = "available"
+    margin: float | None = None
+    margin_reason: str | None = None
+    trim: float = 0.2
+    winsorize: float = 0.1
     in_time: bool = True
     purpose: Literal["exploratory", "confirmatory"] = "exploratory"
     design: Literal["single-arm", "randomised-order"] = "single-arm"
     stages: tuple[int, ...] = STAGES
+    bootstrap_draws: int = 9_999
     seed: int | None = None
+    created: str | None = None
+    data_digest: str | None = None
+    amendments: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         for name, options in _CHOICES.items():
@@ -117,16 +201,38 @@ class Plan:
         if self.scale is not None:
             check_choice("scale", self.scale, ("raw", "log"))
         check_choice("direction", self.direction, ("greater", "less"))
-        _check_pair(self.pair, self.adjust)
-        check_choice("omnibus", self.omnibus, methods_for("omnibus"))
-        check_level(self.level)
         if self.sides not in (1, 2) or isinstance(self.sides, bool):
             raise ArgumentError(f"`sides` must be 1 or 2, got {self.sides!r}.")
         if not isinstance(self.in_time, bool):
             raise ArgumentError(f"`in_time` must be true or false, got {self.in_time!r}.")
-        object.__setattr__(self, "contrasts", _checked_family(self.contrasts))
-        object.__setattr__(self, "stages", check_draws(tuple(self.stages), "stages"))
-        _check_seed(self.seed)
+        check_pair(self.pair, self.adjust, self.sides)
+        check_choice("omnibus", self.omnibus, methods_for("omnibus"))
+        check_level(self.level)
+        check_share("trim", self.trim)
+        check_share("winsorize", self.winsorize)
+        check_count("bootstrap_draws", self.bootstrap_draws, least=99)
+        check_seed(self.seed)
+        check_margin(self.margin, self.margin_reason)
+        for name in ("marker", "unit", "estimand", "margin_reason"):
+            check_text(name, getattr(self, name))
+        check_created(self.created)
+        check_digest(self.data_digest)
+        self._settle()
+
+    def _settle(self) -> None:
+        """Turn lists, as TOML has them, into the tuples that a frozen plan holds."""
+        occasions = checked_occasions(self.occasions)
+        settled = {
+            "occasions": occasions,
+            "lower_limit": checked_limit("lower_limit", self.lower_limit, occasions),
+            "upper_limit": checked_limit("upper_limit", self.upper_limit, occasions),
+            "contrasts": checked_family(self.contrasts),
+            "companions": checked_companions(self.companions),
+            "stages": check_draws(tuple(self.stages), "stages"),
+            "amendments": tuple(str(text) for text in self.amendments),
+        }
+        for name, value in settled.items():
+            object.__setattr__(self, name, value)
 
     @property
     def used_scale(self) -> Scale:
@@ -155,19 +261,39 @@ class Plan:
         _refuse_unknown(changes, ArgumentError)
         return dataclasses.replace(self, **changes)
 
+    def amended(self, **changes: Any) -> Self:
+        """Return the plan with some keys changed, each change put down as an amendment.
+
+        What the plan left open is filled in; that changes nothing that was planned.
+        """
+        changed = self.replace(**changes)
+        told = tuple(
+            f"{name}: {_told(getattr(self, name))} was planned, "
+            f"{_told(getattr(changed, name))} was used"
+            for name in changes
+            if getattr(changed, name) != getattr(self, name)
+            and getattr(self, name) not in (None, ())
+        )
+        return changed.replace(amendments=(*self.amendments, *told))
+
     def to_dict(self) -> dict[str, Any]:
         """Return all keys with plain values, None included."""
-        values = {f.name: getattr(self, f.name) for f in dataclasses.fields(self)}
-        if not isinstance(self.contrasts, str):
-            values["contrasts"] = [list(pair) for pair in self.contrasts]
-        values["stages"] = list(self.stages)
-        return values
+        return {f.name: _listed(getattr(self, f.name)) for f in dataclasses.fields(self)}
 
     def to_toml(self) -> str:
-        """Return the plan as TOML; keys that are None are left out, as TOML has no null."""
+        """Return the plan as TOML; what is empty is left out, as TOML has no null.
+
+        An occasion without a limit stands as nan.
+        """
         import tomli_w
 
-        return tomli_w.dumps({k: v for k, v in self.to_dict().items() if v is not None})
+        optional = {f.name for f in dataclasses.fields(self) if f.default in (None, ())}
+        kept = {
+            name: [math.nan if v is None else v for v in value] if _is_limit(name, value) else value
+            for name, value in self.to_dict().items()
+            if not (name in optional and value in (None, []))
+        }
+        return tomli_w.dumps(kept)
 
     def save(self, path: str | os.PathLike[str]) -> None:
         """Write the plan to a TOML file, whole or not at all."""
@@ -201,19 +327,17 @@ class Plan:
             raise PlanError(f"The plan {name!r} is refused: {error}") from None
 
 
-def methods_for(kind: str) -> tuple[str, ...]:
-    """Return the names of the methods of one kind that a plan can name: no open options."""
-    return tuple(m.name for m in METHODS if m.kind == kind and not m.requires)
+def _is_limit(name: str, value: object) -> bool:
+    return name.endswith("_limit") and isinstance(value, list)
 
 
-def _check_pair(pair: str, adjust: str) -> None:
-    if adjust != "closed":
-        check_choice("pair", pair, methods_for("pair"))
-    elif pair not in CLOSED_METHODS:
-        raise ArgumentError(
-            f"`pair` must be {' or '.join(map(repr, CLOSED_METHODS))} with `adjust` 'closed', "
-            f"got {pair!r}: its scores are computed once from the whole table."
-        )
+def _listed(value: Any) -> Any:
+    """Return tuples as lists, as TOML and JSON have them."""
+    return [_listed(item) for item in value] if isinstance(value, tuple) else value
+
+
+def _told(value: Any) -> str:
+    return "nothing" if value in (None, ()) else repr(_listed(value))
 
 
 def _refuse_unknown(values: Mapping[str, Any], error: type[ArgumentError | PlanError]) -> None:
@@ -223,21 +347,3 @@ def _refuse_unknown(values: Mapping[str, Any], error: type[ArgumentError | PlanE
             guess = nearest(key, known)
             hint = f"Did you mean {guess!r}?" if guess else f"Keys are: {', '.join(known)}."
             raise error(f"The plan has no key {key!r}. {hint}")
-
-
-def _checked_family(family: str | Sequence[Sequence[str]]) -> Family:
-    if isinstance(family, str):
-        return cast(Family, check_choice("contrasts", family, FAMILIES))
-    pairs = tuple(tuple(str(label) for label in pair) for pair in family)
-    if not pairs or any(len(pair) != 2 or pair[0] == pair[1] for pair in pairs):
-        raise ArgumentError(
-            f"`contrasts` must be one of {', '.join(map(repr, FAMILIES))} or pairs of two "
-            f"different occasions, got {family!r}."
-        )
-    return cast(Family, pairs)
-
-
-def _check_seed(seed: int | None) -> None:
-    whole = isinstance(seed, int) and not isinstance(seed, bool)
-    if seed is not None and not (whole and seed >= 0):
-        raise ArgumentError(f"`seed` must be a whole number of at least 0, got {seed!r}.")

@@ -16,13 +16,12 @@ from typing import Any
 
 from robustrm.analysis import Analysis, Row
 from robustrm.ledger import Ledger, LedgerLine
-from robustrm.methods.registry import method as registered
 from robustrm.methods.summary import OccasionSummary
 from robustrm.results import TestResult, plain
 from robustrm.table import OccasionTable, natural_key
 
 SCHEMA = "robustrm.report"
-SCHEMA_VERSION = 1
+SCHEMA_VERSION = 2
 
 Document = dict[str, Any]
 
@@ -40,9 +39,9 @@ def document(analysis: Analysis) -> Document:
     Returns
     -------
     dict
-        Keys ``schema``, ``schema_version``, ``study``, ``plan``, ``attainable``, ``primary``,
-        ``omnibus``, ``supplementary``, ``beside``, ``skipped``, ``effects``, ``summary``,
-        ``cells``, ``inclusion``, ``ledger``, ``notes`` and ``record``.
+        Keys ``schema``, ``schema_version``, ``study``, ``plan``, ``advice``, ``attainable``,
+        ``primary``, ``omnibus``, ``supplementary``, ``beside``, ``skipped``, ``effects``,
+        ``summary``, ``cells``, ``inclusion``, ``ledger``, ``notes`` and ``record``.
     """
     reference = _references(analysis)
     result: Document = plain(
@@ -51,6 +50,7 @@ def document(analysis: Analysis) -> Document:
             "schema_version": SCHEMA_VERSION,
             "study": _study(analysis),
             "plan": analysis.plan.to_dict(),
+            "advice": None if analysis.advice is None else analysis.advice.to_dict(),
             "attainable": analysis.attainable.to_dict(),
             "primary": _primary(analysis),
             "omnibus": _omnibus(analysis),
@@ -107,7 +107,7 @@ def _head(row: Row) -> dict[str, Any]:
     return {
         "role": row.role,
         "label": row.label,
-        "title": registered(row.result.method).title,
+        "title": row.title,
         "adjust": row.adjust,
         "p_adjusted": row.p_adjusted,
     }

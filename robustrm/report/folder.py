@@ -31,7 +31,7 @@ _FOLDERS = frozenset({"tables", "figures"})
 # what earlier reports put into these folders; anything else is somebody's own
 _WRITTEN = re.compile(
     r"(summary|comparisons|beside|effects|inclusion|ledger|cells)\.csv"
-    r"|(trajectories|comparisons|null-distribution|change-\d+)\.(svg|png)"
+    r"|(trajectories|comparisons|null-distribution|change-\d+|methods-\d+)\.(svg|png)"
 )
 
 

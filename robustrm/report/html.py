@@ -12,10 +12,13 @@ from typing import Any
 from robustrm._format import Style, listing
 from robustrm.report import sentences, sheets
 from robustrm.report.document import Document
+from robustrm.report.effects_sheet import effects_sheet
 from robustrm.report.methods_text import methods_paragraph
+from robustrm.report.plan_text import origin
 from robustrm.report.results_text import results_paragraph
 
 ANSWER = "comparisons"  # the figure that stands beside the answer
+METHODS = "methods-"  # how the names of those begin that stand beside the parametric results
 
 
 @dataclass(frozen=True)
@@ -75,7 +78,8 @@ def page(document: Document, drawings: Sequence[Drawing] = (), style: Style = "m
         sheet=_set(document, style),
         record=record_lines(document["record"]),
         answer_drawings=[d for d in drawings if d.name == ANSWER],
-        drawings=[d for d in drawings if d.name != ANSWER],
+        methods_drawings=[d for d in drawings if d.name.startswith(METHODS)],
+        drawings=[d for d in drawings if d.name != ANSWER and not d.name.startswith(METHODS)],
     )
 
 
@@ -88,6 +92,7 @@ def _said(document: Document, style: Style) -> dict[str, Any]:
         "shape": sentences.shape(document),
         "completeness": sentences.completeness(document),
         "exploratory": sentences.exploratory(document),
+        "origin": origin(document),
         "counts_instead": sentences.counts_instead(document),
         "planned_tests": sentences.tested(document["primary"]["comparisons"]),
         "planned_notes": sentences.remarks(document["primary"]["comparisons"], style),
@@ -115,7 +120,7 @@ def _set(document: Document, style: Style) -> dict[str, sheets.Sheet]:
         "contrasts": sheets.beside_contrasts_sheet(document, style),
         "all_occasions": sheets.beside_overall_sheet(document, style),
         "summary": sheets.summary_sheet(document),
-        "effects": sheets.effects_sheet(document, style),
+        "effects": effects_sheet(document, style),
         "occasions": sheets.occasions_sheet(document),
         "special": sheets.special_cells_sheet(document),
         "left": sheets.left_sheet(document),

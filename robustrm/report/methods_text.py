@@ -21,6 +21,9 @@ from robustrm.report.document import Document
 from robustrm.report.results_text import results_paragraph
 from robustrm.report.sentences import (
     FAMILIES,
+    NULLS,
+    SUBSTITUTES,
+    ZEROS,
     adjustment,
     all_rows,
     in_sentence,
@@ -28,16 +31,6 @@ from robustrm.report.sentences import (
     marker,
     planned_rows,
 )
-
-SUBSTITUTES = {
-    "half": "half the limit",
-    "root2": "the limit divided by √2",
-    "limit": "the limit itself",
-}
-ZEROS = {
-    "pratt": "zero differences ranked and then left out, after Pratt",
-    "drop": "zero differences left out before ranking, after Wilcoxon",
-}
 
 
 def methods_text(document: Document, style: Style = "medical") -> str:
@@ -103,6 +96,11 @@ def _towards(direction: str) -> str:
 
 
 def _null_distributions(document: Document) -> str:
+    compared = {row["result"]["null"] for row in document["primary"]["comparisons"]}
+    if compared == {"asymptotic"}:
+        row = document["omnibus"]
+        overall = f", that of the overall test is {NULLS[row['result']['null']]}" if row else ""
+        return f"P values of the planned comparisons are asymptotic{overall}."
     used = {row["result"]["null"] for row in planned_rows(document)}
     parts = []
     if "exact" in used:
@@ -119,6 +117,11 @@ def _adjusted(document: Document) -> str:
     level = percent(1 - family["level"])
     if name is None:
         return f"The level of the tests was {level}."
+    if family["adjust"] == "single-step":
+        return (
+            "P values were adjusted over all pairs of occasions by the studentized range, at level "
+            f"{level}."
+        )
     m = len(family["comparisons"])
     return (
         f"P values were adjusted over the {m} comparisons by the {name} method, at level {level}."
@@ -192,7 +195,7 @@ def _limits_rule(document: Document) -> str:
 def _missing_rule(document: Document) -> str:
     if document["study"]["n_complete"] == document["study"]["n_subjects"]:
         return ""
-    if document["plan"]["adjust"] == "closed":
+    if document["plan"]["adjust"] in ("closed", "single-step"):
         return "Planned comparisons use the subjects with every occasion; no value was filled in."
     return (
         "Each comparison uses all subjects with both occasions, overall tests those with every "

@@ -46,6 +46,16 @@ FAMILIES = {
     "named": "the pairs named in the plan",
 }
 
+SUBSTITUTES = {
+    "half": "half the limit",
+    "root2": "the limit divided by √2",
+    "limit": "the limit itself",
+}
+ZEROS = {
+    "pratt": "zero differences ranked and then left out, after Pratt",
+    "drop": "zero differences left out before ranking, after Wilcoxon",
+}
+
 
 @dataclass(frozen=True)
 class Tested:
@@ -64,7 +74,18 @@ class Remark:
     text: str
 
 
-_PEOPLE = ("Winsorized", "Friedman", "Wilcoxon", "Quade", "Page", "Skillings-Mack", "Hotelling")
+_PEOPLE = (
+    "Winsorized",
+    "Friedman",
+    "Wilcoxon",
+    "Quade",
+    "Page",
+    "Skillings-Mack",
+    "Hotelling",
+    "Yuen",
+    "Nemenyi",
+    "Conover",
+)
 
 
 def in_sentence(title: str) -> str:
@@ -185,7 +206,9 @@ def tested(rows: Iterable[Result]) -> list[Tested]:
     for row in rows:
         result = row["result"]
         key = (row["title"], result["scale"], result["hypothesis"], result["estimand"])
-        labels.setdefault(key, []).append(row["label"])
+        who = labels.setdefault(key, [])
+        if row["label"] not in who:  # one statistic may stand against two null distributions
+            who.append(row["label"])
     return [
         Tested(f"{title}, {scale} scale ({listing(who, 20)})", hypothesis, estimand)
         for (title, scale, hypothesis, estimand), who in labels.items()
@@ -237,9 +260,16 @@ def _partitions(document: Document, style: Style) -> list[str]:
 
 
 def moves(document: Document, label: str) -> str:
-    """Return how many subjects fell and rose in one comparison; empty where not counted."""
+    """Return how many subjects fell and rose in one comparison; empty where not counted.
+
+    Said with their number where the comparison rests on fewer, those with every occasion.
+    """
+    sizes = {
+        row["label"]: row["result"]["n_subjects"] for row in document["primary"]["comparisons"]
+    }
     found = [
-        str(effect["remark"])
+        ("" if effect["n_subjects"] == sizes[label] else f"of {effect['n_subjects']} with both, ")
+        + str(effect["remark"])
         for effect in document["effects"]
         if effect["label"] == label and effect["estimate"]["name"] == "probability of a fall"
     ]

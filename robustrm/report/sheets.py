@@ -30,7 +30,18 @@ from robustrm.report.sentences import (
 
 ALL = "all occasions"
 # What can be no larger than 1 in size: two decimals, and no leading zero in APA style.
-_BOUNDED = ("probability of a fall", "matched-pairs rank-biserial correlation", "Kendall's W")
+_BOUNDED = (
+    "probability of a fall",
+    "probability of a larger value",
+    "matched-pairs rank-biserial correlation",
+    "relative effect",
+    "Kendall's W",
+)
+# In units of spread: two decimals.
+_STANDARDIZED = ("robust standardized difference", "Cohen's d_z", "Cohen's d_av")
+
+# What a probability is the probability of, in a column of shifts.
+_EVENTS = {"probability of a fall": "fall", "probability of a larger value": "larger"}
 
 
 @dataclass(frozen=True)
@@ -121,8 +132,12 @@ def primary_sheet(document: Document, style: Style = "medical") -> Sheet:
     for row in family["comparisons"]:
         adjusted = [p_cell(row["p_adjusted"], style)] if name else []
         result = row["result"]
-        cells = [row["label"], str(result["n_subjects"]), *_estimate(result["estimate"], style)]
-        cells += [_level(result["estimate"]), p_cell(result["p_value"], style), *adjusted]
+        cells = [
+            row["label"],
+            str(result["n_subjects"]),
+            *estimate_cells(result["estimate"], style),
+        ]
+        cells += [level_cell(result["estimate"]), p_cell(result["p_value"], style), *adjusted]
         rows.append([*cells, NULLS[result["null"]]])
     return _sheet(_primary_caption(document), headings, rows, (0, len(headings) - 1))
 
@@ -159,23 +174,34 @@ def _overall(row: Result, style: Style) -> tuple[str, ...]:
 
 
 def beside_contrasts_sheet(document: Document, style: Style = "medical") -> Sheet:
-    """Return all results about two occasions, by what they compare, the planned one first."""
-    headings = (
-        "Analysis", "Role", "Estimand", "Scale", "n", "Estimate", "CI", "P", "Adjusted P",
-        "Differs in",
-    )  # fmt: skip
-    groups: dict[str, list[Line]] = {}
+    """Return all results about two occasions, by what they compare and what they estimate.
+
+    The planned estimand comes first, those on another footing last. Rows of one group have one
+    estimand and one scale, so that no number is read against one of another kind.
+    """
+    headings = ("Analysis", "Role", "n", "Estimate", "CI", "P", "Adjusted P", "Differs in")
+    groups: dict[tuple[str, str, str], list[Line]] = {}
     for row in all_rows(document):
-        if row["result"]["n_occasions"] == 2 and row["label"] != ALL:
+        if row["label"] != ALL:
             result = row["result"]
             numbers = (*_told(result["estimate"], style), p_cell(result["p_value"], style))
-            cells = (*_who(row), *numbers, _adjusted(row, style), _differs(row))
-            groups.setdefault(row["label"], []).append(Line(cells, _is_apart(row)))
+            who = (row["title"], row["role"], str(result["n_subjects"]))
+            cells = (*who, *numbers, _adjusted(row, style), _differs(row))
+            key = (row["label"], result["estimand"], result["scale"])
+            groups.setdefault(key, []).append(Line(cells, _is_apart(row)))
+    labels = list(dict.fromkeys(label for label, _, _ in groups))
+    ordered = sorted(
+        groups.items(),
+        key=lambda group: (labels.index(group[0][0]), all(line.apart for line in group[1])),
+    )
     return Sheet(
         f"Two occasions: every analysis beside the planned one{_exploratory_label(document)}",
         headings,
-        tuple(Group(name, _apart_last(lines)) for name, lines in groups.items()),
-        frozenset({0, 1, 2, 3, 9}),
+        tuple(
+            Group(f"{label}: {estimand}, {scale} scale", _apart_last(lines))
+            for (label, estimand, scale), lines in ordered
+        ),
+        frozenset({0, 1, 7}),
     )
 
 
@@ -234,38 +260,31 @@ def _adjusted(row: Result, style: Style) -> str:
     return p_cell(row["p_adjusted"], style)
 
 
-def _estimate(estimate: Mapping[str, Any] | None, style: Style) -> tuple[str, str]:
+def estimate_cells(estimate: Mapping[str, Any] | None, style: Style) -> tuple[str, str]:
+    """Return an estimate with its unit, and its interval."""
     if estimate is None:
         return "not given", DASH
     if estimate["name"] in _BOUNDED:
         low, high = (bounded(estimate[end], style) for end in ("low", "high"))
         interval = DASH if estimate["low"] is None else f"{low} to {high}"
         return bounded(estimate["value"], style), interval
-    unit = f" {estimate['unit']}" if estimate["unit"] else ""
+    if estimate["name"] in _STANDARDIZED:
+        low, high = fixed(estimate["low"]), fixed(estimate["high"])
+        return fixed(estimate["value"]), DASH if estimate["low"] is None else f"{low} to {high}"
+    unit = {None: "", "%": "%"}.get(estimate["unit"], f" {estimate['unit']}")
     return f"{number(estimate['value'])}{unit}", span(estimate["low"], estimate["high"])
 
 
 def _told(estimate: Mapping[str, Any] | None, style: Style) -> tuple[str, str]:
     """Return an estimate for a column of shifts, where a probability says that it is one."""
-    value, interval = _estimate(estimate, style)
+    value, interval = estimate_cells(estimate, style)
     is_fall = estimate is not None and estimate["name"] == "probability of a fall"
     return (f"{value} (fall)" if is_fall else value), interval
 
 
-def _level(estimate: Mapping[str, Any] | None) -> str:
+def level_cell(estimate: Mapping[str, Any] | None) -> str:
+    """Return the level that an interval attains."""
     return DASH if estimate is None or estimate["level"] is None else level_text(estimate["level"])
-
-
-def effects_sheet(document: Document, style: Style = "medical") -> Sheet:
-    """Return the effect sizes with the interval where one exists."""
-    rows = []
-    for effect in document["effects"]:
-        value, interval = _estimate(effect["estimate"], style)
-        name, n = effect["estimate"]["name"], str(effect["n_subjects"])
-        level = _level(effect["estimate"])
-        rows.append([name, effect["label"], n, value, interval, level, effect["remark"]])
-    headings = ("Effect size", "Comparison", "n", "Value", "CI", "Level", "How to read it")
-    return _sheet("Effect sizes of planned contrasts and overall test", headings, rows, (0, 1, 6))
 
 
 # ── data ──────────────────────────────────────────────────────────────────────────────────

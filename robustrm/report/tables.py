@@ -14,6 +14,8 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from robustrm.report.document import Document
+from robustrm.report.effects_sheet import no_change
+from robustrm.report.sentences import note_text
 
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
 
@@ -48,8 +50,8 @@ def csv_tables(document: Document) -> dict[str, str]:
     }
 
 
-_EFFECT = ("label", "name", "value", "low", "high", "level", "kind", "unit", "scale",
-           "n_subjects", "remark")  # fmt: skip
+_EFFECT = ("group", "label", "name", "value", "low", "high", "level", "kind", "no_change",
+           "unit", "scale", "n_subjects", "reading", "remark", "notes")  # fmt: skip
 _LEDGER = ("step", "subject", "occasion", "cells", "what")
 
 
@@ -68,7 +70,7 @@ def _row(row: Mapping[str, Any]) -> dict[str, Any]:
     return {
         **named,
         "differs_in": ", ".join(row["apart"]),
-        "df": ", ".join(repr(df) for df in result["df"] if df is not None),
+        "df": _df(result),
         "p_low": p_low,
         "p_high": p_high,
         "estimate_name": estimate.get("name"),
@@ -76,8 +78,19 @@ def _row(row: Mapping[str, Any]) -> dict[str, Any]:
     }
 
 
+def _df(result: Mapping[str, Any]) -> str:
+    """Return degrees of freedom; beside a defined statistic a missing one is infinite."""
+    missing = "" if result["statistic"] is None else "infinite"
+    listed = (missing if df is None else repr(df) for df in result["df"])
+    return ", ".join(text for text in listed if text)
+
+
 def _effect(effect: Mapping[str, Any]) -> dict[str, Any]:
-    return {**_without(effect, "estimate"), **effect["estimate"]}
+    # the scale is that of the effect: None where the order of the values alone counts
+    estimate = effect["estimate"]
+    notes = " ".join(note_text(note) for note in estimate["notes"])
+    told = {"no_change": no_change(estimate), "notes": notes}
+    return {**estimate, **_without(effect, "estimate"), **told}
 
 
 def _inclusions(document: Document) -> list[dict[str, Any]]:

@@ -11,6 +11,7 @@ from typing import Any
 from robustrm._format import Style, aligned
 from robustrm.report import sentences
 from robustrm.report.document import Document
+from robustrm.report.plan_text import origin
 from robustrm.report.sheets import (
     Sheet,
     beside_contrasts_sheet,
@@ -46,6 +47,7 @@ def text(document: Document, style: Style = "medical") -> str:
         _overall(safe, style),
         _beside(safe, style),
         _block("Not made", sentences.skipped(safe)),
+        _block("How it was planned", origin(safe)),
         _block("What each row tests", _tested(safe)),
         _block("Notes", _notes(safe, style)),
         _block("Cautions", sentences.CAUTIONS),
@@ -83,7 +85,9 @@ def _beside(document: Document, style: Style) -> str:
 
 
 def _grouped(sheet: Sheet) -> str:
-    short = sheet.without("Estimand").without("Differs in")
+    short = sheet.without("Differs in")
+    if "Estimand" in short.headings:  # in the headings of the groups otherwise
+        short = short.without("Estimand")
     marked = [
         [f"{'≠' if line.apart else ' '} {line.cells[0]}", *line.cells[1:]] for line in short.lines
     ]

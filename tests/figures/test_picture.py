@@ -28,7 +28,10 @@ def drawn(table: OccasionTable):
 
 def test_the_set_is_trajectories_each_comparison_and_all_together(drawn):
     names = [picture.name for picture in drawn]
-    assert names == ["trajectories", "change-1", "change-2", "comparisons", "null-distribution"]
+    assert names == [
+        "trajectories", "change-1", "change-2", "comparisons", "methods-1", "methods-2",
+        "null-distribution",
+    ]  # fmt: skip
     assert len({picture.title for picture in drawn}) == len(drawn)
 
 
@@ -62,7 +65,7 @@ def test_a_comparison_without_subjects_has_no_panel_of_its_own():
         [[2.0, 3.0, math.nan], [4.0, 3.0, math.nan]], occasions=["a", "b", "c"]
     )
     names = [picture.name for picture in pictures(analyze(table, Plan(seed=1)))]
-    assert names == ["trajectories", "change-1", "comparisons"]
+    assert names == ["trajectories", "change-1", "comparisons", "methods-1"]
 
 
 def test_the_trajectories_in_words(table):

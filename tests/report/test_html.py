@@ -77,8 +77,8 @@ def test_the_frame_of_the_page(analysis: Analysis):
 def test_the_sections_stand_in_their_order(analysis: Analysis):
     reader = read(page(document(analysis)))
     assert [section["id"] for section in reader.all("section")] == [
-        "answer", "figures", "occasions", "overall", "beside", "effects", "limits", "inclusion",
-        "paragraphs", "cautions", "record",
+        "answer", "plan", "figures", "occasions", "overall", "beside", "effects", "limits",
+        "inclusion", "paragraphs", "cautions", "record",
     ]  # fmt: skip
     targets = {a["href"].removeprefix("#") for a in reader.all("a") if a["href"]}
     assert targets == {section["id"] for section in reader.all("section")}

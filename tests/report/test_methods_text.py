@@ -15,6 +15,7 @@ from robustrm.report.document import document
 from robustrm.report.methods_text import methods_paragraph, methods_text
 from robustrm.report.results_text import results_paragraph
 from robustrm.table import OccasionTable
+from tests.report.conftest import invented
 
 
 def test_both_paragraphs_are_one_line_each(varied: Analysis):
@@ -109,3 +110,18 @@ def test_methods_say_what_was_planned(analysis: Analysis):
         "removed no value as an outlier", "the smallest p is", "not adjusted for their number",
     ):  # fmt: skip
         assert words in found
+
+
+@pytest.mark.parametrize("method", ["nemenyi", "conover"])
+def test_comparisons_of_rank_sums_are_told_as_what_they_are(method: str):
+    """Two of the twelve subjects lack an occasion: they count among the falls, not in the test."""
+    plan = Plan(pair=method, adjust="single-step", purpose="confirmatory", seed=1)
+    held = document(analyze(invented(missing=2), plan))
+    done, found = methods_paragraph(held), results_paragraph(held)
+    assert f"by the {method.capitalize()} test (two-sided)." in done
+    assert "P values of the planned comparisons are asymptotic, that of the overall test" in done
+    assert "adjusted over all pairs of occasions by the studentized range, at level 5%." in done
+    assert "difference of mean ranks, with studentized range intervals that together hold" in done
+    assert "Planned comparisons use the subjects with every occasion" in done
+    assert re.search(r"mean ranks week 4 − week 0 was −[\d.]+ \(.*n = 10; of 11 with both, ", found)
+    assert re.search(r"asymptotic P [=<] [\d.]+, adjusted P [=<]", found)

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
+import re
+
 import numpy as np
 
 from robustrm._format import width
@@ -50,13 +53,22 @@ def test_every_number_of_the_planned_table_stands_beside_its_n(analysis: Analysi
         assert f" {comparison.result.n_subjects} " in line
 
 
-def test_rows_on_another_footing_are_marked_and_last_in_their_block(analysis: Analysis):
+def test_rows_of_one_group_share_estimand_and_scale_and_other_footings_are_marked_last(
+    analysis: Analysis,
+):
     lines = text(document(analysis)).splitlines()
-    start, end = lines.index("week 4 vs week 0") + 1, lines.index("week 8 vs week 0")
-    marks = [line[0] for line in lines[start:end]]
-    assert marks == sorted(marks)
-    assert [line for line in lines[start:end] if line[0] == "≠"] == [lines[end - 1]]
-    assert " raw " in lines[end - 1]
+    heads = [
+        i for i, line in enumerate(lines) if re.match(r"week 4 vs week 0: .*, \w+ scale$", line)
+    ]
+    end = next(i for i, line in enumerate(lines) if line.startswith("week 8 vs week 0: "))
+    assert lines[heads[0]] == "week 4 vs week 0: pseudo-median ratio, log scale"
+    assert lines[heads[-1]] == "week 4 vs week 0: mean difference, raw scale"
+    groups = [lines[i + 1 : j] for i, j in itertools.pairwise([*heads, end])]
+    apart = [line.startswith("≠") for group in groups for line in group]
+    assert apart == sorted(apart)
+    assert any(apart)
+    assert not all(apart)
+    assert groups[-1][0].startswith("≠ Paired t test")
     assert any(line.startswith("≠ rests on another n or scale") for line in lines)
 
 
