@@ -116,8 +116,8 @@ RULES: tuple[Rule, ...] = (
         _always,
         {"omnibus": "aligned_ranks"},
         lambda facts: (
-            "Overall test: aligned ranks, exact. They compare changes between subjects too, which "
-            f"ranks within {counted(facts.n_occasions, 'occasion')} cannot, and bound the weight "
+            "Overall test: aligned ranks, by rearranging. They compare changes between subjects too, "
+            f"which ranks within {counted(facts.n_occasions, 'occasion')} cannot, and bound the weight "
             f"of an extreme value{_tail_words(facts)}."
         ),
     ),

@@ -47,7 +47,7 @@ def scores(rows, scale, trim):
 
 @both_scales
 @pytest.mark.property
-@given(rows=TABLES, winsorize=trims)
+@given(rows=TABLES, trim=trims)
 def test_p_equals_the_enumeration_of_all_arrangements(scale, rows, trim):
     values = values_by_sums(scores(rows, scale, trim), spread)
     check_upper(rm.winsorized_permutation(raw(rows).on_scale(scale), winsorize=trim), values)
@@ -55,7 +55,7 @@ def test_p_equals_the_enumeration_of_all_arrangements(scale, rows, trim):
 
 @both_scales
 @pytest.mark.property
-@given(rows=SMALL, winsorize=trims)
+@given(rows=SMALL, trim=trims)
 def test_p_equals_the_enumeration_with_clip_points_found_anew(scale, rows, trim):
     """The clip points do not depend on the arrangement, which makes the test exact."""
     values = values_by_definition(
@@ -76,7 +76,7 @@ def test_p_equals_the_enumeration_of_five_by_four(scale, name):
 @pytest.mark.reference
 @both_scales
 @pytest.mark.property
-@given(rows=measured(n=st.integers(3, 7), k=st.integers(3, 4)), winsorize=trims)
+@given(rows=measured(n=st.integers(3, 7), k=st.integers(3, 4)), trim=trims)
 def test_statistic_is_f_of_statsmodels_anova_of_the_clipped_values(scale, rows, trim):
     values = np.array(clipped(rows, scale, trim))
     share = share_of_variation(values.tolist())
