@@ -116,9 +116,9 @@ RULES: tuple[Rule, ...] = (
         _always,
         {"omnibus": "aligned_ranks"},
         lambda facts: (
-            "Overall test: aligned ranks, by rearranging. They compare changes between subjects too, "
-            f"which ranks within {counted(facts.n_occasions, 'occasion')} cannot, and bound the weight "
-            f"of an extreme value{_tail_words(facts)}."
+            "Overall test: aligned ranks, by rearranging. They compare changes between subjects "
+            f"too, which ranks within {counted(facts.n_occasions, 'occasion')} cannot, and bound "
+            f"the weight of an extreme value{_tail_words(facts)}."
         ),
     ),
     Rule(
