@@ -14,7 +14,7 @@ from robustrm.methods.registry import METHODS
 from robustrm.results import note_codes
 from tests.methods.tables import LABELS, PAIR, present, raw
 
-ADDITIVE = [m for m in METHODS if "draws" in m.options]
+ADDITIVE = [m for m in METHODS if m.is_additive]
 EXACT_FAR = {"sign_test", "signed_rank", "friedman"}  # whole scores, cheap for many subjects
 each = pytest.mark.parametrize("method", ADDITIVE, ids=lambda m: m.name)
 each_costly = pytest.mark.parametrize(
