@@ -94,7 +94,7 @@ def test_a_point_is_the_median_and_the_sd_of_a_subject(plain):
 def test_the_fitted_line_is_that_of_scipy_and_has_the_slope_of_the_advice(plain):
     """`theilslopes` with method "joint": the intercept is the median of the residuals."""
     rows = np.log(np.column_stack([np.median(ROWS, axis=1), np.std(ROWS, axis=1, ddof=1)]))
-    expected = stats.theilslopes(rows[:, 1], rows[:, 0], method="joint")
+    expected = stats.theilslopes(rows[:, 1], rows[:, 0], method="joint")  # type: ignore[call-overload]  # the stubs lack it
     axes = spread_level(plain)
     assert diagnose(plain).blind.slope == pytest.approx(expected.slope)
     x, y = np.log(points(axes, "_slope 0.73: fitted")).T
@@ -171,7 +171,8 @@ def test_a_subject_with_a_value_beyond_a_limit_is_open(table: OccasionTable):
     axes = spread_level(table)
     found = line(axes, "subject with a value beyond a limit")
     assert found.get_markerfacecolor() == "white"
-    np.testing.assert_allclose(found.get_xydata(), [[0.5, np.std([3, 0.5, 0.5], ddof=1)]])
+    spread = float(np.std([3, 0.5, 0.5], ddof=1))
+    np.testing.assert_allclose(found.get_xydata(), [[0.5, spread]])
     assert len(points(axes, "subject")) == 4
 
 

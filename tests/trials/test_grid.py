@@ -113,7 +113,7 @@ def test_a_shipped_cell_is_remade_to_the_last_count(shipped, place):
     cell = grid.cells()[place]
     run = next(row for row in shipped if row.group == cell.group)
     made = grid.cell_rows(cell, run.datasets, draws=run.draws, seed=run.seed)
-    by_place = {}
+    by_place: dict[grid.GridRow, list[grid.GridRow]] = {}
     for row in shipped:
         key = dataclasses.replace(row, test="", rejections=0, rate=0)
         by_place.setdefault(key, []).append(row)
