@@ -58,6 +58,10 @@ from robustrm.methods.winsorized_permutation import winsorized_permutation
 from robustrm.plan import Plan
 from robustrm.reading import read_table
 from robustrm.results import Comparison, Estimate, FollowUps, Note, TestResult
+from robustrm.sensitivity_analysis.reference_change import reference_change
+from robustrm.sensitivity_analysis.reference_changes import ReferenceChanges, reference_changes
+from robustrm.sensitivity_analysis.running import Sensitivity, sensitivity
+from robustrm.sizing import Sizing, sample_size
 from robustrm.table import OccasionTable
 
 __version__ = "0.1.0"
@@ -80,7 +84,10 @@ __all__ = [
     "Plan",
     "PlanError",
     "Problem",
+    "ReferenceChanges",
     "RobustrmError",
+    "Sensitivity",
+    "Sizing",
     "TestResult",
     "TooFewError",
     "advise",
@@ -109,9 +116,13 @@ __all__ = [
     "rank_biserial",
     "rank_pair",
     "read_table",
+    "reference_change",
+    "reference_changes",
     "relative_effects",
     "robust_standardized_difference",
     "row_flip",
+    "sample_size",
+    "sensitivity",
     "sign_flip",
     "sign_test",
     "signed_rank",

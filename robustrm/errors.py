@@ -7,9 +7,10 @@
     │   └── BudgetError   exit 2   an exact answer was demanded beyond the work budget
     ├── PlanError         exit 2   a plan file is refused
     ├── TooFewError       exit 3   too few subjects or values for the method
-    └── DataError         exit 3   the data are refused, every problem listed
+    ├── DataError         exit 3   the data are refused, every problem listed
+    └── LostWorkError     exit 1   a worker was lost, and its block with it, too often
 
-All but the root are ValueErrors too.
+Those with exit 2 or 3 refuse what was given: they are ValueErrors too.
 
 There is no warning class: what a reader must know about a result travels with the
 result as a :class:`robustrm.results.Note`, where no filter can lose it.
@@ -38,6 +39,10 @@ class PlanError(RobustrmError, ValueError):
 
 class TooFewError(RobustrmError, ValueError):
     """A method needs more subjects (or occasions) than the table has for it."""
+
+
+class LostWorkError(RobustrmError):
+    """Blocks were lost with their workers; what was finished can be resumed from its folder."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -205,11 +205,11 @@ class TestResult(_Record):
     alternative : {"two-sided", "greater", "less"} or None
         Direction; None for an omnibus test.
     p_interval : tuple of float, optional
-        99% interval of a Monte Carlo p value.
+        99% interval of a p value by Monte Carlo or importance sampling.
     arrangements : int, optional
         Exact and Monte Carlo: number of equally likely arrangements, the product over subjects.
     draws : int, optional
-        Monte Carlo and bootstrap: number of draws.
+        Monte Carlo, importance sampling and bootstrap: number of draws.
     estimate : Estimate, optional
         Estimate with its interval, where one exists.
     subjects : tuple of str

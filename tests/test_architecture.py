@@ -55,11 +55,14 @@ MAY_IMPORT: dict[str, set[str]] = {
         "methods", "plan", "table", *COMMON,
     },
     "analysis": {*ANALYSIS, *COMMON},
-    "sensitivity_analysis": {"analysis", *ANALYSIS, *COMMON},
+    "sensitivity_analysis": {"kernels", "analysis", *ANALYSIS, *COMMON},
+    # sends blocks out and keeps them; knows nothing of what they hold
+    "work": {"_checks", "errors"},
     "simulation": {"kernels", *COMMON},
-    "trials": {*TRIALS, *COMMON},
-    "sizing": {"trials", *TRIALS, *COMMON},
-    "panels": {"cells", "kernels", "methods", "methods.registry", "plan", *TABLE, *COMMON},
+    # the level of the specification grid is that of the grid itself, table in and p out
+    "trials": {"sensitivity_analysis", *TRIALS, *COMMON},
+    "sizing": {"trials", "work", *TRIALS, *COMMON},
+    "panels": {"reading", "cells", "work", "kernels", "analysis", *ANALYSIS, *COMMON},
     # figures draw what a result class holds: the rooms that own one, and nothing that computes.
     # A blind figure is made of what advice may see, so it takes the view.
     "figures": {

@@ -136,6 +136,10 @@ EDITS: list[tuple[list[str], dict]] = [
     (["--not-in-time"], {"in_time": False}),
     (["--purpose", "confirmatory"], {"purpose": "confirmatory"}),
     (["--design", "randomised-order"], {"design": "randomised-order"}),
+    (["--selected"], {"selected": True}),
+    (["--not-selected"], {"selected": False}),
+    (["--own-runs"], {"own_runs": True}),
+    (["--shared-runs"], {"own_runs": False}),
     (["--stages", "999,9999"], {"stages": (999, 9999)}),
     (["--seed", "7"], {"seed": 7}),
     (["--companions", "rank_pair,hotelling"], {"companions": ("rank_pair", "hotelling")}),
@@ -283,7 +287,7 @@ def test_advice_without_data_or_design_is_refused():
     ],
 )
 def test_labels_are_a_list_or_one_each(given: list[str], labels: list[str] | None):
-    assert options._label_list(given) == labels
+    assert options.label_list(given) == labels
 
 
 def test_labels_with_commas_reach_the_reader(tmp_path: Path):

@@ -37,7 +37,7 @@ def test_a_script_runs_where_it_is_run(script: Path, tmp_path: Path):
     )
     assert done.returncode == 0, done.stderr
     assert done.stdout.strip()
-    reports = list(tmp_path.rglob("report.html"))
+    reports = [path for name in ("report", "panel") for path in tmp_path.rglob(f"{name}.html")]
     assert len(reports) == 1
 
 

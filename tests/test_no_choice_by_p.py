@@ -18,6 +18,7 @@ PACKAGE = Path(__file__).resolve().parents[1] / "robustrm"
 LOOKS_LIKE_P = re.compile(r"(ps?|p_.+|.+_p|.+_ps?_.+)")
 
 WORDING = "words or rounds a p value that is already there"
+READING = "says how finished rows read against the level; nothing is chosen by it"
 ALLOWED = {
     ("_format.py", "p_cell"): WORDING,
     ("figures/describing.py", "_p_words"): WORDING,
@@ -25,6 +26,26 @@ ALLOWED = {
     ("report/results_text.py", "_drawn"): WORDING,
     ("report/results_text.py", "_test"): WORDING,
     ("report/sheets.py", "_adjusted"): WORDING,
+    ("report/sensitivity_sheets.py", "_gaps"): WORDING,
+    ("report/sensitivity_sheets.py", "_left_out"): WORDING,
+    ("sensitivity_analysis/overview.py", "_reading"): "says how a row reads",
+    ("sensitivity_analysis/reading.py", "_is_at_or_below"): READING,
+    ("sensitivity_analysis/reading.py", "p_against"): WORDING,
+    ("sensitivity_analysis/reading.py", "p_words"): WORDING,
+    ("sensitivity_analysis/beside.py", "_cells"): WORDING,
+    ("sensitivity_analysis/beside.py", "_reads_like"): READING,
+    ("sensitivity_analysis/drivers.py", "_adjustment"): WORDING,
+    ("sensitivity_analysis/drivers.py", "_together_words"): WORDING,
+    ("sensitivity_analysis/drivers.py", "parted_words"): WORDING,
+    ("sensitivity_analysis/influence.py", "of"): "keeps a repeat that has no P in its place",
+    ("sensitivity_analysis/influence_words.py", "_ranges"): WORDING,
+    ("sensitivity_analysis/influence_words.py", "_sides_held"): WORDING,
+    ("sensitivity_analysis/leave_one_out.py", "_numbers"): WORDING,
+    ("sensitivity_analysis/limits_rows.py", "_open"): READING,
+    ("sensitivity_analysis/limits_rows.py", "range_row"): "keeps a row without adjusted P",
+    ("sensitivity_analysis/limits_substitutes.py", "_parted"): READING,
+    ("sensitivity_analysis/limits_substitutes.py", "overall_apart"): READING,
+    ("sensitivity_analysis/limits_words.py", "_moves"): WORDING,
     ("methods/signed_rank.py", "_disagreement_note"): "notes that P and interval disagree",
     ("methods/rank_sums.py", "agreement_notes"): "notes that an approximation fails",
     ("methods/rank_sums.py", "conover"): "keeps a P that is not defined in its place",
@@ -45,7 +66,7 @@ ALLOWED = {
 # Where methods are chosen, nothing is allowed: no p may even be mentioned in a condition.
 CHOOSING = (
     "advice/",
-    "plan.py",
+    "plan/",
     "analysis/",
     "cli/",
     "methods/registry.py",

@@ -46,6 +46,17 @@ PLANS = st.builds(
     in_time=st.booleans(),
     purpose=st.sampled_from(["exploratory", "confirmatory"]),
     design=st.sampled_from(["single-arm", "randomised-order"]),
+    selected=st.sampled_from([None, True, False]),
+    own_runs=st.sampled_from([None, True, False]),
+    grid=st.fixed_dictionaries(
+        {},
+        optional={
+            "scale": st.lists(st.sampled_from(["log", "raw"]), min_size=1, unique=True),
+            "trim": st.lists(st.floats(0, 0.49), min_size=1, max_size=3, unique=True),
+            "replicates": st.lists(st.sampled_from(["mean", "geometric"]), unique=True),
+            "draws": st.integers(99, 10**6),
+        },
+    ),
     stages=st.sets(st.integers(99, 10**7), min_size=1, max_size=3).map(lambda s: tuple(sorted(s))),
     seed=st.one_of(st.none(), st.integers(0, 2**62)),
 )
@@ -114,7 +125,7 @@ def test_every_key_moves_the_digest():
         "companions": ("sign_test",), "missing": "complete", "margin": 1.25,
         "margin_reason": "agreed beforehand", "trim": 0.1, "winsorize": 0.2,
         "bootstrap_draws": 999, "created": "2026-03-04", "data_digest": "0" * 64,
-        "amendments": ("one",),
+        "amendments": ("one",), "grid": {"scale": ["log"]}, "selected": True, "own_runs": False,
     }  # fmt: skip
     assert {f.name for f in dataclasses.fields(rm.Plan)} <= set(changes)
     plan = plan.replace(margin=2.0, margin_reason="a first guess")
@@ -234,6 +245,19 @@ def test_limits_of_the_occasions_survive_the_file(tmp_path):
     assert rm.Plan.load(tmp_path / "plan.toml") == plan
 
 
+def test_a_grid_is_a_table_of_the_file_and_keeps_the_defaults_of_the_keys_it_leaves_out(tmp_path):
+    path = tmp_path / "plan.toml"
+    path.write_text('level = 0.9\n\n[grid]\nscale = ["log"]\ntrim = [0]\n', encoding="utf-8")
+    plan = rm.Plan.load(path)
+    assert (plan.grid.scale, plan.grid.trim) == (("log",), (0.0,))
+    assert plan.grid.test == rm.Plan().grid.test
+    same = rm.Plan().replace(level=0.9, grid={"scale": ["log"], "trim": [0]})
+    assert hash(plan) == hash(same)
+    told = plan.amended(grid={"scale": ["raw"]}).amendments
+    assert "['log']" in told[0]
+    assert "['raw']" in told[0]
+
+
 @pytest.mark.parametrize(
     ("keys", "message"),
     [
@@ -251,6 +275,18 @@ def test_limits_of_the_occasions_survive_the_file(tmp_path):
         ({"estimand": "  "}, "`estimand` must be a text"),
         ({"trim": 20}, r"`trim` must be in \[0, 0.5\), got 20\. Did you mean 0.2\?"),
         ({"companions": ("page_trend",)}, "`companions` must be one of .*got 'page_trend'"),
+        ({"grid": {"scal": ["log"]}}, r"`grid` has no key 'scal'\. Did you mean 'scale'\?"),
+        ({"grid": {"colour": 1}}, r"`grid` has no key 'colour'\. Keys are: scale, test, trim"),
+        ({"grid": {"test": ["fridman"]}}, r"`grid\.test` must be .* Did you mean 'friedman'\?"),
+        ({"grid": {"scale": "log"}}, r"`grid\.scale` must be a list of names.* \['log'\]"),
+        ({"grid": {"scale": []}}, r"`grid\.scale` must hold at least 1 names, got 0"),
+        ({"grid": {"trim": 0.2}}, r"`grid\.trim` must be a list of shares, got 0\.2"),
+        ({"grid": {"trim": [20]}}, r"`grid\.trim` must be in \[0, 0\.5\), got 20\. .* 0\.2\?"),
+        ({"grid": {"trim": [0.1, 0.1]}}, r"`grid\.trim` must not repeat a share"),
+        ({"grid": {"draws": 10}}, r"`grid\.draws` must be a whole number of at least 99, got 10"),
+        ({"grid": ["log"]}, r"`grid` must be a table of choices, got \['log'\]"),
+        ({"selected": "yes"}, "`selected` must be true, false or left out"),
+        ({"own_runs": 1}, "`own_runs` must be true, false or left out .* got 1"),
         ({"missing": "drop"}, "`missing` must be one of 'available', 'complete'"),
     ],
 )

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -62,6 +62,24 @@ class Row:
             "p_adjusted": plain(self.p_adjusted),
             "result": self.result.to_dict(),
         }
+
+
+def references(rows: Iterable[Row]) -> dict[str, Row]:
+    """Return, for each thing compared, the planned row that others stand beside."""
+    found: dict[str, Row] = {}
+    for row in rows:
+        found.setdefault(row.label, row)
+    return found
+
+
+def apart(result: TestResult, reference: TestResult) -> list[str]:
+    """Say in what a result differs from the planned one, so that it is not read as its equal."""
+    differs = {
+        "n": result.subjects != reference.subjects or result.n_subjects != reference.n_subjects,
+        "scale": result.scale != reference.scale,
+        "estimand": result.estimand != reference.estimand,
+    }
+    return [name for name, different in differs.items() if different]
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,19 +5,19 @@ from __future__ import annotations
 import dataclasses
 import importlib.metadata
 import platform
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator
 from typing import Any
-from zlib import crc32
 
 import numpy as np
 
 from robustrm.advice import Advice, advise
 from robustrm.analysis.notes import analysis_notes
+from robustrm.analysis.options import family_of, overall, stream
 from robustrm.analysis.result import ALL_OCCASIONS, Analysis, Inclusion, Row, Skip
 from robustrm.errors import ArgumentError, DataError, TooFewError
 from robustrm.methods.attainable import attainable_of
 from robustrm.methods.effects import effect_sizes
-from robustrm.methods.follow_up import declared_pairs, follow_up
+from robustrm.methods.follow_up import declared_pairs
 from robustrm.methods.null_distribution import NullDistribution, null_distribution
 from robustrm.methods.registry import method as registered
 from robustrm.methods.summary import summarize
@@ -109,7 +109,7 @@ def analyze(
     steps.done()
     null = _null_distribution(scaled, settled, omnibus, root)
     steps.done()
-    beside, skipped_beside = _beside(kept, settled)
+    beside, skipped_beside = _beside(kept, settled, root)
     steps.done()
     effects = effect_sizes(
         scaled,
@@ -195,24 +195,8 @@ def _root(plan: Plan, rng: np.random.Generator | int | None) -> int:
     return entropy if isinstance(entropy, int) else 0
 
 
-def stream(root: int, name: str, block: int = 0) -> np.random.SeedSequence:
-    """Return the random stream of one method: adding a method never changes another's."""
-    return np.random.SeedSequence(root, spawn_key=(crc32(name.encode()), block))
-
-
 def _primary(table: OccasionTable, plan: Plan, root: int) -> FollowUps:
-    closed = plan.adjust == "closed"
-    options = _offered(plan, "sign_flip" if closed else plan.pair, _thresholds(table, plan), root)
-    family = follow_up(
-        table,
-        method=plan.pair,
-        family=plan.contrasts,
-        adjust=plan.adjust,
-        intervals=plan.intervals,
-        level=plan.level,
-        rng=stream(root, plan.pair),
-        options={k: v for k, v in options.items() if k not in ("level", "rng")},
-    )
+    family = family_of(table, plan, plan.pair, plan.adjust, root)
     if all(comparison.result.n_subjects == 0 for comparison in family):
         raise TooFewError(
             "No planned comparison has a subject with both of its occasions. Check the ids and "
@@ -221,45 +205,14 @@ def _primary(table: OccasionTable, plan: Plan, root: int) -> FollowUps:
     return family
 
 
-def _thresholds(table: OccasionTable, plan: Plan) -> tuple[float, ...]:
-    """Return the levels that a p value of the family is compared with, step-down ones too."""
-    k = table.n_occasions
-    sizes = {"first": k - 1, "successive": k - 1, "all": k * (k - 1) // 2}
-    m = sizes[plan.contrasts] if isinstance(plan.contrasts, str) else len(plan.contrasts)
-    return tuple(plan.alpha / i for i in range(1, m + 1))
-
-
-def _offered(plan: Plan, name: str, thresholds: Sequence[float], root: int) -> dict[str, Any]:
-    """Return what the plan says of the options that a method takes."""
-    entry = registered(name)
-    offered = {
-        "alternative": plan.alternative,
-        "zeros": plan.zeros,
-        "substitute": plan.substitute,
-        "trim": plan.trim,
-        "winsorize": plan.winsorize,
-        "level": plan.level,
-        # where draws approach a p value by stages, the method takes the levels it is held against
-        "draws": plan.stages if "thresholds" in entry.options else plan.bootstrap_draws,
-        "thresholds": thresholds,
-        "rng": stream(root, name),
-    }
-    return {key: value for key, value in offered.items() if key in entry.options}
-
-
 def _omnibus(
     table: OccasionTable, plan: Plan, root: int
 ) -> tuple[TestResult | None, tuple[Skip, ...]]:
     entry = registered(plan.omnibus)
     try:
-        return _overall(table, plan, plan.omnibus, root), ()
+        return overall(table, plan, plan.omnibus, root), ()
     except TooFewError as error:
         return None, (Skip(f"{entry.title} ({table.scale} scale)", str(error)),)
-
-
-def _overall(table: OccasionTable, plan: Plan, name: str, root: int, **options: Any) -> TestResult:
-    offered = _offered(plan, name, (plan.alpha,), root)
-    return registered(name).load()(table, **offered, **options)
 
 
 def _companions(
@@ -275,7 +228,7 @@ def _companions(
     skips: list[Skip] = []
     for role, name, options in _beside_overall(table, plan):
         try:
-            result = _overall(table, plan, name, root, **options)
+            result = overall(table, plan, name, root, **options)
             rows.append(Row(role, ALL_OCCASIONS, result))
         except TooFewError as error:
             skips.append(Skip(f"{registered(name).title} ({table.scale} scale)", str(error)))
@@ -307,17 +260,8 @@ def _beside_overall(table: OccasionTable, plan: Plan) -> Iterator[tuple[Role, st
 
 
 def _other_pairs(table: OccasionTable, plan: Plan, name: str, root: int) -> list[Row]:
-    options = _offered(plan, name, _thresholds(table, plan), root)
-    family = follow_up(
-        table,
-        method=name,
-        family=plan.contrasts,
-        adjust=None if registered(name).kind == "family" else "holm",
-        intervals=plan.intervals,
-        level=plan.level,
-        rng=stream(root, name),
-        options={k: v for k, v in options.items() if k not in ("level", "rng")},
-    )
+    adjust = None if registered(name).kind == "family" else "holm"
+    family = family_of(table, plan, name, adjust, root)
     return [Row("supplementary", c.label, c.result, c.p_adjusted, family.adjust) for c in family]
 
 
@@ -331,7 +275,7 @@ def _null_distribution(
     return null_distribution(table, plan.omnibus, rng=stream(root, "null distribution"), **taken)
 
 
-def _beside(raw: OccasionTable, plan: Plan) -> tuple[tuple[Row, ...], tuple[Skip, ...]]:
+def _beside(raw: OccasionTable, plan: Plan, root: int) -> tuple[tuple[Row, ...], tuple[Skip, ...]]:
     rows: list[Row] = []
     skips: list[Skip] = []
     for scale in ("raw", "log"):
@@ -343,27 +287,15 @@ def _beside(raw: OccasionTable, plan: Plan) -> tuple[tuple[Row, ...], tuple[Skip
             skips.append(Skip(f"parametric results ({scale} scale)", reason))
             continue
         try:
-            rows.append(_parametric_omnibus(table, role, plan))
+            rows.append(Row(role, ALL_OCCASIONS, overall(table, plan, "anova", root)))
         except TooFewError as error:
             skips.append(Skip(f"{registered('anova').title} ({scale} scale)", str(error)))
-        rows.extend(_parametric_pairs(table, role, plan))
+        rows.extend(_parametric_pairs(table, role, plan, root))
     return tuple(rows), tuple(skips)
 
 
-def _parametric_omnibus(table: OccasionTable, role: Role, plan: Plan) -> Row:
-    return Row(role, ALL_OCCASIONS, registered("anova").load()(table, substitute=plan.substitute))
-
-
-def _parametric_pairs(table: OccasionTable, role: Role, plan: Plan) -> list[Row]:
-    family = follow_up(
-        table,
-        method="paired_t",
-        family=plan.contrasts,
-        adjust="bonferroni",
-        intervals=plan.intervals,
-        level=plan.level,
-        options={"alternative": plan.alternative, "substitute": plan.substitute},
-    )
+def _parametric_pairs(table: OccasionTable, role: Role, plan: Plan, root: int) -> list[Row]:
+    family = family_of(table, plan, "paired_t", "bonferroni", root)
     return [Row(role, c.label, c.result, c.p_adjusted, family.adjust) for c in family]
 
 

@@ -4,6 +4,7 @@ Exit codes: 0 done; 2 usage, also a refused plan; 3 data refused, every problem 
 130 interrupted; 1 anything else. Results go to stdout, progress and notes to stderr.
 """
 
+from robustrm.cli import size
 from robustrm.cli.commands import main
 
-__all__ = ["main"]
+__all__ = ["main", "size"]

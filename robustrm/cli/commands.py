@@ -5,13 +5,11 @@ from __future__ import annotations
 import datetime as dt
 import inspect
 import io
-import json
 import shlex
 import sys
 import textwrap
 import typing
-from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -22,7 +20,7 @@ from robustrm._checks import did_you_mean
 from robustrm._format import Style
 from robustrm.advice import Advice
 from robustrm.advice import advise as advise_on
-from robustrm.analysis import Analysis, Progress
+from robustrm.analysis import Analysis
 from robustrm.cli.exits import REFUSED, Group, debug_option
 from robustrm.cli.options import (
     PLAN_OPTIONS,
@@ -34,10 +32,12 @@ from robustrm.cli.options import (
     table_of,
     together,
 )
+from robustrm.cli.shown import echo_json, examples, json_option, progress_bar
 from robustrm.errors import ArgumentError, DataError
 from robustrm.methods.registry import METHODS, Method
 from robustrm.plan import Plan
 from robustrm.report.structure import problems_text, structure, structure_text
+from robustrm.sensitivity_analysis import Sensitivity
 from robustrm.table import OccasionTable
 
 if TYPE_CHECKING:
@@ -55,23 +55,10 @@ class Recorded(click.Command):
         return super().parse_args(ctx, args)
 
 
-def _examples(text: str) -> str:
-    """Return the last paragraph of a help page, its lines kept as they are."""
-    lines = textwrap.indent(inspect.cleandoc(text), "  ")
-    return f"\b\nExample:\n{lines}"
-
-
-json_option = click.option("--json", "as_json", is_flag=True, help="Print JSON instead of text.")
-
-
-def _echo_json(content: Mapping[str, Any]) -> None:
-    click.echo(json.dumps(content, allow_nan=False, ensure_ascii=False, indent=2))
-
-
 @click.group(
     cls=Group,
     context_settings={"help_option_names": ["-h", "--help"]},
-    epilog=_examples(
+    epilog=examples(
         """
         robustrm demo demo
         robustrm check demo/calprotectin.csv --subject patient \\
@@ -100,7 +87,7 @@ def main() -> None:
 @main.command(
     cls=Recorded,
     short_help="Show what is understood of a file, or what is in the way.",
-    epilog=_examples(
+    epilog=examples(
         """
         robustrm check crp.csv --subject id --occasions "week 0,week 6,week 12"
         robustrm check crp.csv --subject id --occasion week --value crp \\
@@ -129,14 +116,14 @@ def check(
         table.on_scale(plan.used_scale)
     except DataError as error:
         if as_json:
-            _echo_json({"problems": [problem.to_dict() for problem in error.problems]})
+            echo_json({"problems": [problem.to_dict() for problem in error.problems]})
         else:
             click.echo(problems_text(error))
         ctx.exit(REFUSED)
     analyze_line = shlex.join(["robustrm", "analyze", *ctx.meta[_WORDS], "--out", "report"])
     found = structure(table)
     if as_json:
-        _echo_json({**found, "problems": [], "analyze": analyze_line})
+        echo_json({**found, "problems": [], "analyze": analyze_line})
     else:
         click.echo(f"{structure_text(found)}\n\nNothing stands in the way. To analyze:\n")
         click.echo(analyze_line)
@@ -144,7 +131,7 @@ def check(
 
 @main.command(
     short_help="Analyze one marker as planned and write the report.",
-    epilog=_examples(
+    epilog=examples(
         """
         robustrm analyze crp.csv --subject id --occasions "week 0,week 6,week 12" \\
             --marker CRP --unit mg/L --lower-limit 0.3 --out report
@@ -191,7 +178,7 @@ def analyze(
     # without a plan file the advice fills in what no option declares
     advice = None if plan_file else advise_on(table, plan=plan, keep=declared_keys(options))
     used = plan if advice is None else advice.plan
-    with _progress(quiet) as progress:
+    with progress_bar(quiet) as progress:
         analysis = robustrm.analyze(table, used, advice=advice, progress=progress)
     if out is not None:
         from robustrm.report.folder import write_report
@@ -210,24 +197,75 @@ def _result_text(analysis: Analysis, style: Style, *, as_json: bool) -> str:
     return json_text(document) if as_json else text(document, style=style)
 
 
-@contextmanager
-def _progress(quiet: bool, label: str = "analyzing") -> Iterator[Progress | None]:
-    """Give a callable that draws a bar on stderr, where somebody is looking."""
-    if quiet or not sys.stderr.isatty():
-        yield None
-        return
-    with click.progressbar(length=1, label=label, file=sys.stderr) as bar:
+@main.command(
+    short_help="Ask whether the conclusion holds under other assumptions.",
+    epilog=examples(
+        """
+        robustrm sensitivity crp.csv --subject id \\
+            --occasions "week 0,week 6,week 12" --out report
+        """
+    ),
+)
+@data_argument
+@reading_options
+@together(plan_file_option, *PLAN_OPTIONS.values())
+@click.option(
+    "--out",
+    type=click.Path(file_okay=False),
+    metavar="FOLDER",
+    help="Write the whole report here, this section included.",
+)
+@click.option(
+    "--style",
+    type=click.Choice(typing.get_args(Style)),
+    default="medical",
+    help="How p values are printed: P = 0.013 (medical) or p = .013 (apa).",
+)
+@json_option
+@click.option("--quiet", is_flag=True, help="No progress and no notes on stderr.")
+@debug_option
+def sensitivity(
+    data: str,
+    plan_file: str | None,
+    out: str | None,
+    style: Style,
+    as_json: bool,
+    quiet: bool,
+    **options: Any,
+) -> None:
+    """Ask whether the conclusion about DATA holds under other reasonable assumptions.
 
-        def show(done: int, total: int) -> None:
-            bar.length = total
-            bar.update(done - bar.pos)
+    Beside the parametric result, over all declared specifications with one joint p value,
+    without one person, over what values beyond a limit may have been, under other handling of
+    missed visits. Says what drives each disagreement. No vote is taken, and nothing replaces
+    the planned result.
+    """
+    plan = plan_of(plan_file, options)
+    table = table_of(data, options, plan)
+    used = plan if plan_file else advise_on(table, plan=plan, keep=declared_keys(options)).plan
+    with progress_bar(quiet) as progress:
+        found = robustrm.sensitivity(table, used, progress=progress)
+    if out is not None:
+        from robustrm.report.folder import write_report
 
-        yield show
+        folder = write_report(found.analysis, out, style=style, sensitivity=found)
+        if not quiet:
+            click.echo(f"Report: {folder / 'report.html'}", err=True)
+    click.echo(_sensitivity_text(found, style, as_json=as_json), nl=False)
+
+
+def _sensitivity_text(found: Sensitivity, style: Style, *, as_json: bool) -> str:
+    from robustrm.report.document import document
+    from robustrm.report.json_text import json_text
+    from robustrm.report.sensitivity_text import sensitivity_text
+
+    held = document(found.analysis, found)
+    return json_text(held) if as_json else sensitivity_text(held, style)
 
 
 @main.command(
     short_help="Advise a plan, from the design or without looking at the occasions.",
-    epilog=_examples(
+    epilog=examples(
         """
         robustrm advise --subjects 12 --visits 4 --save plan.toml
         robustrm advise crp.csv --subject id --occasions "week 0,week 6,week 12"
@@ -279,7 +317,7 @@ def advise(
         _save_plan(advice.plan, save, table)
     told = [_simulated(advice, quiet)] if simulate else []
     if as_json:
-        _echo_json({**advice.to_dict(), "simulated": told[0].to_dict() if told else None})
+        echo_json({**advice.to_dict(), "simulated": told[0].to_dict() if told else None})
         return
     from robustrm.report.plan_text import statement as in_words
 
@@ -291,7 +329,7 @@ def advise(
 def _simulated(advice: Advice, quiet: bool) -> OwnDesign:
     from robustrm.trials.own_design import simulate_own_design
 
-    with _progress(quiet, "simulating") as progress:
+    with progress_bar(quiet, "simulating") as progress:
         return simulate_own_design(advice.facts, progress=progress)
 
 
@@ -305,9 +343,7 @@ def _save_plan(plan: Plan, file: str, table: OccasionTable | None) -> None:
     click.echo(f"Plan: {file}", err=True)
 
 
-@main.command(
-    short_help="Write invented data to try it on.", epilog=_examples("robustrm demo demo")
-)
+@main.command(short_help="Write invented data to try it on.", epilog=examples("robustrm demo demo"))
 @click.argument("folder", type=click.Path(file_okay=False), default=".")
 @debug_option
 def demo(folder: str) -> None:
@@ -322,7 +358,7 @@ def demo(folder: str) -> None:
 
 @main.command(
     short_help="List the methods, or explain one.",
-    epilog=_examples("robustrm methods\nrobustrm methods friedman"),
+    epilog=examples("robustrm methods\nrobustrm methods friedman"),
 )
 @click.argument("name", required=False)
 @debug_option

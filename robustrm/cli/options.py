@@ -42,7 +42,7 @@ def _labels(text: str) -> tuple[str, ...]:
     return tuple(label.strip() for label in row)
 
 
-def _label_list(given: Sequence[str]) -> list[str] | None:
+def label_list(given: Sequence[str]) -> list[str] | None:
     """Return the labels of an option given once as a list, or repeatedly with one label each."""
     if not given:
         return None
@@ -67,7 +67,7 @@ def _whole_numbers(text: str) -> tuple[int, ...]:
         raise click.BadParameter(message) from None
 
 
-def _condition(text: str) -> tuple[str, str]:
+def condition(text: str) -> tuple[str, str]:
     """Return column and value of ``COLUMN=VALUE``."""
     column, sign, wanted = text.partition("=")
     if not sign or not column.strip():
@@ -92,6 +92,11 @@ reading_options = together(
     ),
     click.option("--occasion", metavar="COLUMN", help="Long data: column with the occasion."),
     click.option("--value", metavar="COLUMN", help="Long data: column with the values."),
+    click.option(
+        "--plate",
+        metavar="COLUMN",
+        help="Long data: column that says in which run or plate each value was assayed.",
+    ),
     click.option(
         "--order",
         multiple=True,
@@ -127,7 +132,7 @@ reading_options = together(
     click.option("--sheet", metavar="NAME", help="Sheet of a workbook."),
     click.option(
         "--where",
-        type=_condition,
+        type=condition,
         multiple=True,
         metavar="COLUMN=VALUE",
         help="Use only the rows with exactly this text. Repeat it to narrow further.",
@@ -146,7 +151,7 @@ def table_of(data: str, options: Mapping[str, Any], plan: Plan) -> OccasionTable
     # long data have the occasions in a column, and their order apart
     labels = "order" if reading["occasion"] is not None else "occasions"
     for name in ("occasions", "order"):
-        reading[name] = _label_list(reading[name])
+        reading[name] = label_list(reading[name])
     for name in ("marker", "unit", "lower_limit", "upper_limit"):
         if reading[name] is None:
             reading[name] = _listed(getattr(plan, name))
@@ -188,6 +193,8 @@ _PLAN_HELP = MappingProxyType(
         "in_time": "Whether the occasions follow each other in time.",
         "purpose": "In an exploratory study p values are labelled so.",
         "design": "Design of the study; it decides the wording.",
+        "selected": "Whether people were selected on a high value of the marker.",
+        "own_runs": "Whether each occasion was assayed in a run of its own.",
         "stages": "Monte Carlo draws, raised stage by stage, such as 9999,99999.",
         "bootstrap_draws": "Bootstrap resamples.",
         "seed": "Root of all random draws.",
@@ -204,17 +211,21 @@ _METAVARS = MappingProxyType(
         "estimand": "TEXT",
     }
 )
+# How a no is said; not said, the key stays as it is.
+_NO = MappingProxyType(
+    {"in_time": "not-in-time", "selected": "not-selected", "own_runs": "shared-runs"}
+)
 # Told by the options that read a file, or by the plan file alone.
 _OF_READING = ("marker", "unit", "occasions", "lower_limit", "upper_limit")
-_OF_THE_FILE = ("created", "data_digest", "amendments")
+_OF_THE_FILE = ("created", "data_digest", "amendments", "grid")
 
 
 def _plan_option(field: dataclasses.Field[Any]) -> Decorator:
     """Return the option of one key of the plan; not given, it leaves the plan as it is."""
     flag = f"--{field.name.replace('_', '-')}"
     text = f"{_PLAN_HELP[field.name]}{_usual(field.default)}"
-    if field.name == "in_time":
-        return click.option(f"{flag}/--not-in-time", default=None, help=text)
+    if field.name in _NO:
+        return click.option(f"{flag}/--{_NO[field.name]}", default=None, help=text)
     return click.option(
         flag,
         type=_plan_type(field.name),
@@ -275,7 +286,7 @@ def declared_keys(options: Mapping[str, Any]) -> dict[str, Any]:
         keys["contrasts"] = _family(keys["contrasts"])
     if keys.get("companions") == ("none",):
         keys["companions"] = ()
-    labels = _label_list(options.get("occasions") or options.get("order") or ())
+    labels = label_list(options.get("occasions") or options.get("order") or ())
     if labels is not None:
         keys["occasions"] = tuple(labels)
     for name in ("marker", "unit", "lower_limit", "upper_limit"):

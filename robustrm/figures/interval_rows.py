@@ -40,7 +40,7 @@ def draw_rows(axes: Axes, rows: Sequence[IntervalRow]) -> None:
     axes.margins(x=0.08)
     axes.set_ylim(len(rows) - 0.5, -0.5)
     axes.axvline(neutral, color=style.QUIET, linewidth=1, zorder=1)
-    _set_range(axes, known, neutral, log=logarithmic)
+    set_range(axes, known, neutral, log=logarithmic)
     for place, row in enumerate(rows):
         _draw_row(axes, place, row)
     style.ticks(axes.xaxis, log=logarithmic)
@@ -64,7 +64,7 @@ def write_headings(axes: Axes, p_heading: str) -> None:
         )
 
 
-def _set_range(axes: Axes, estimates: list[Estimate], neutral: float, *, log: bool) -> None:
+def set_range(axes: Axes, estimates: list[Estimate], neutral: float, *, log: bool) -> None:
     """Show every estimate, every finite end and the line of no change, with a margin."""
     ends = [neutral] + [
         end

@@ -46,6 +46,7 @@ def figure_bytes(figure: Figure, kind: str = "svg") -> bytes:
         # The layout is made here, at the figure's own resolution. Made anew while saving, it
         # would depend on the kind of file and on what was saved before.
         _lay_out(figure)
+        _settle(figure)
         engine = figure.get_layout_engine()
         figure.set_layout_engine("none")
         try:
@@ -53,6 +54,14 @@ def figure_bytes(figure: Figure, kind: str = "svg") -> bytes:
         finally:
             figure.set_layout_engine(engine)
     return target.getvalue()
+
+
+def _settle(figure: Figure) -> None:
+    """Round the places of the axes: the last bits depend on where the layout lies in memory."""
+    for axes in figure.axes:
+        left, bottom, width, height = axes.get_position(original=True).bounds
+        axes.set_position((round(left, 9), round(bottom, 9), round(width, 9), round(height, 9)))
+        axes.set_in_layout(True)  # a place that is set leaves the layout, if it is not told to stay
 
 
 def _lay_out(figure: Figure) -> None:

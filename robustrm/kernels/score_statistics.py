@@ -39,7 +39,7 @@ def chi2_of(t: Floats | float, a: Floats | float, k: int) -> Floats:
         return np.asarray((k - 1) * np.asarray(t) / np.asarray(a))
 
 
-def f_of(t: Floats | float, a: Floats | float, n: int) -> Floats:
+def f_of(t: Floats | float, a: Floats | float, n: Floats | int) -> Floats:
     """Return (n−1) T / (nA − T): infinite where all subjects are alike, NaN where none varies."""
     square, whole = np.asarray(t, dtype=np.float64), n * np.asarray(a, dtype=np.float64)
     rest = whole - square

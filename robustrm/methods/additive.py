@@ -11,7 +11,7 @@ import functools
 import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
-from typing import Any, Literal, cast
+from typing import Any, cast
 
 import numpy as np
 from scipy import special
@@ -19,8 +19,9 @@ from scipy import special
 from robustrm._checks import Alternative, check_choice, check_draws
 from robustrm._format import counted, number, percent
 from robustrm.errors import BudgetError, TooFewError
-from robustrm.kernels.null.engine import smallest_tail, tail
-from robustrm.kernels.null.forms import Form, centring
+from robustrm.kernels.null.engine import Choice, smallest_tail, tail
+from robustrm.kernels.null.forms import Form, Linear, centring
+from robustrm.kernels.null.problem import LONGEST_TABLE
 from robustrm.kernels.null.results import Tail
 from robustrm.kernels.null.tables import Table, permutation_tables
 from robustrm.kernels.null.work import plan_work
@@ -30,6 +31,9 @@ from robustrm.table import OccasionTable
 from robustrm.ties import Floats
 
 NULLS = ("auto", "exact", "monte carlo")
+FAR_TAILS = ("importance sampling", "saddlepoint")
+# With fewer effective draws the interval of importance sampling is not to be relied upon.
+FEW_EFFECTIVE = 100
 EXCHANGEABLE = (
     "For each subject every order of the values over the occasions is equally likely "
     "(the occasions are exchangeable)."
@@ -43,10 +47,11 @@ class NullOptions:
 
     Parameters
     ----------
-    null : {"auto", "exact", "monte carlo"}
-        ``"auto"`` is exact within the stated work budget, Monte Carlo beyond it.
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}
+        ``"auto"`` is exact within the stated work budget, Monte Carlo beyond it. The last two are
+        for far tails, the very last for linear forms only.
     draws : int or sequence of int, optional
-        Monte Carlo draws, or their stages.
+        Draws, or their stages.
     thresholds : sequence of float
         Levels that the p value is compared with; draws go on while one is in doubt.
     rng : Generator, SeedSequence, int or None
@@ -79,6 +84,12 @@ class NullTail:
             "arrangements": self.tail.arrangements,
             "draws": self.tail.draws,
         }
+
+    def details(self) -> dict[str, Any]:
+        """Return the extra numbers that tell how p was found."""
+        effective = self.tail.effective_sample_size
+        more = {} if effective is None else {"effective_sample_size": effective}
+        return {"smallest_p": self.smallest_p, **more}
 
 
 @dataclass(frozen=True, eq=False)
@@ -125,26 +136,41 @@ class AdditiveProblem:
         Raises
         ------
         BudgetError
-            With ``null="exact"`` beyond the budget; the message says what it would cost.
+            With ``null="exact"`` beyond the budget; the message says what it would cost. For far
+            tails, when a subject has too many arrangements to list.
         """
-        check_null(options.null)
+        self._check_null(options.null)
         stages = check_draws(options.draws)
-        cost = plan_work(self.tables, self.form)
-        if options.null == "exact" and not cost.affordable:
-            raise BudgetError(
-                f"`null` must be 'auto' or 'monte carlo' for this table, got 'exact': "
-                f"{cost.sentence}."
-            )
         found = tail(
             self.tables,
             self.observed,
             self.form,
-            null=cast(Literal["auto", "exact", "monte carlo"], options.null),
-            stages=stages,
+            null=cast(Choice, options.null),
+            stages=None if options.draws is None else stages,
             thresholds=tuple(options.thresholds),
             rng=np.random.default_rng(options.rng),
         )
-        return NullTail(found, self.smallest_p, monte_carlo_notes(found, options.thresholds))
+        levels = options.thresholds
+        notes = (*monte_carlo_notes(found, levels), *far_tail_notes(found, levels))
+        return NullTail(found, self.smallest_p, notes)
+
+    def _check_null(self, null: str) -> None:
+        """Refuse a way to the null distribution that this test has not, or cannot afford."""
+        far = FAR_TAILS if isinstance(self.form, Linear) else FAR_TAILS[:1]
+        check_choice("null", null, (*NULLS, *far))
+        cost = plan_work(self.tables, self.form)
+        if null == "exact" and not cost.affordable:
+            raise BudgetError(
+                f"`null` must be 'auto' or 'monte carlo' for this table, got 'exact': "
+                f"{cost.sentence}."
+            )
+        longest = max(table.size for table in self.tables)
+        if null in FAR_TAILS and longest > LONGEST_TABLE:
+            raise BudgetError(
+                f"`null` must be 'auto' or 'monte carlo' for this table, got {null!r}: it lists "
+                f"the arrangements of each subject, at most {LONGEST_TABLE:,}, and here are "
+                f"{longest:,}."
+            )
 
     @property
     def smallest_p(self) -> float | None:
@@ -273,7 +299,7 @@ def omnibus_result(
         alternative=alternative,
         subjects=used.ids,
         notes=(*found.notes, *notes, *_unmoved_note(problem.scores)),
-        details={**details, "smallest_p": found.smallest_p},
+        details={**details, **found.details()},
     )
 
 
@@ -290,16 +316,53 @@ def _unmoved_note(scores: Floats) -> tuple[Note, ...]:
 
 
 def monte_carlo_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]:
-    """Return what a reader must know of a Monte Carlo p, nothing of an exact one."""
-    if found.p_interval is None or found.draws is None:
+    """Return what a reader must know of a Monte Carlo p, nothing of another one."""
+    if found.null != "monte carlo" or found.p_interval is None or found.draws is None:
         return ()
+    text = f"P by {counted(found.draws, 'random arrangement')}: {_with_interval(found)}"
+    return (Note("monte carlo", text, *_in_doubt(found, thresholds)),)
+
+
+def _with_interval(found: Tail) -> str:
+    assert found.p_interval is not None
     low, high = found.p_interval
-    in_doubt = [level for level in thresholds if low <= level <= high]
+    return f"{number(found.p_value)}, {percent(0.99)} interval {number(low)} to {number(high)}."
+
+
+def _in_doubt(found: Tail, thresholds: Sequence[float]) -> tuple[str, ...]:
+    """Return consequence and action where the interval holds a threshold."""
+    assert found.p_interval is not None
+    low, high = found.p_interval
+    inside = [level for level in thresholds if low <= level <= high]
+    if not inside:
+        return ()
+    return f"It is not resolved against {number(inside[0])}.", "Raise `draws` to resolve it."
+
+
+def far_tail_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]:
+    """Return what a reader must know of a p by one of the ways to a far tail."""
+    if found.how == "corner":
+        fact = "So few arrangements are at least as extreme that they were counted."
+        return (Note("counted", fact, "P is exact."),)
+    if found.null == "saddlepoint":
+        return (_SADDLEPOINT,)
+    effective = found.effective_sample_size
+    if effective is None or found.draws is None:
+        return ()
     text = (
-        f"P by {counted(found.draws, 'random arrangement')}: {number(found.p_value)}, "
-        f"{percent(0.99)} interval {number(low)} to {number(high)}."
+        f"P by importance sampling with {counted(found.draws, 'draw')} "
+        f"(effective sample size {number(effective)}): {_with_interval(found)}"
     )
-    if in_doubt:
-        consequence = f"It is not resolved against {number(in_doubt[0])}."
-        return (Note("monte carlo", text, consequence, "Raise `draws` to resolve it."),)
-    return (Note("monte carlo", text),)
+    if effective < FEW_EFFECTIVE:
+        consequence = "Few draws carry the estimate, so its interval may be too short."
+        return (Note("importance sampling", text, consequence, "Raise `draws`."),)
+    return (Note("importance sampling", text, *_in_doubt(found, thresholds)),)
+
+
+_SADDLEPOINT = Note(
+    "saddlepoint",
+    "P is a saddlepoint approximation.",
+    "Against exact laws of 20 to 60 subjects its error was at most 4% of P for signed ranks and "
+    "about 10% for sign flips, more when one difference outweighs the others.",
+    "Compare with null='exact' or 'importance sampling' where it matters.",
+)

@@ -37,8 +37,9 @@ def friedman(
     table : OccasionTable
         The rows complete on all occasions are used. Only the order of a subject's own
         values counts, so the scale plays no part.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling"}, default "auto"
         Exact within the stated work budget, Monte Carlo beyond it.
+        Importance sampling is for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws; default 9,999, raised to 99,999 and 999,999 while the p value is
         not resolved against a threshold.

@@ -33,8 +33,9 @@ def normal_scores(
     table : OccasionTable
         The rows complete on all occasions are used. Only the order of a subject's own
         values counts, so the scale plays no part.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling"}, default "auto"
         Exact within the stated work budget, Monte Carlo beyond it.
+        Importance sampling is for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, or their stages.
     thresholds : sequence of float, default (0.05,)

@@ -50,8 +50,9 @@ def page_trend(
         One number an occasion, in `order`, such as the weeks; default 1, 2, ..., k.
     alternative : {"two-sided", "greater", "less"}, default "two-sided"
         ``"greater"`` means rising in the stated order.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}, default "auto"
         Exact within the stated work budget, Monte Carlo beyond it.
+        Importance sampling and saddlepoint are for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, or their stages.
     thresholds : sequence of float, default (0.05,)

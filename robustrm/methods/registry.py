@@ -323,3 +323,22 @@ def method(name: str) -> Method:
         if candidate.name == name:
             return candidate
     raise KeyError(name)
+
+
+_PEOPLE = (
+    "Winsorized",
+    "Friedman",
+    "Wilcoxon",
+    "Quade",
+    "Page",
+    "Skillings-Mack",
+    "Hotelling",
+    "Yuen",
+    "Nemenyi",
+    "Conover",
+)
+
+
+def in_sentence(title: str) -> str:
+    """Return the name of a method inside a sentence: names of people keep their capital."""
+    return title if title.startswith(_PEOPLE) else f"{title[:1].lower()}{title[1:]}"

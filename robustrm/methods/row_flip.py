@@ -36,8 +36,9 @@ def row_flip(
         marker, where symmetry is nearer the truth.
     substitute : {"half", "root2", "limit"}, default "half"
         What enters for a value below the limit.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling"}, default "auto"
         Exact within the stated work budget, Monte Carlo beyond it.
+        Importance sampling is for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, or their stages.
     thresholds : sequence of float, default (0.05,)

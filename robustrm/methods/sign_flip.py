@@ -50,8 +50,9 @@ def sign_flip(
         What enters for a value below the limit.
     level : float, default 0.95
         Least level of the two-sided interval.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}, default "auto"
         Exact to about 40 subjects, Monte Carlo beyond.
+        Importance sampling and saddlepoint are for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, or their stages.
     thresholds : sequence of float, default (0.05,)
@@ -128,7 +129,7 @@ def sign_flip(
         estimate=estimate,
         subjects=pair.ids,
         notes=(*found.notes, *_no_interval(estimate, values.size, level)),
-        details={"p_normal": normal_p(_z(test.scores), direction), "smallest_p": found.smallest_p},
+        details={"p_normal": normal_p(_z(test.scores), direction), **found.details()},
     )
 
 

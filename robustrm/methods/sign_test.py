@@ -42,8 +42,8 @@ def sign_test(
         ``"greater"`` means that the second occasion is larger.
     level : float, default 0.95
         Level of the interval.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
-        Exact (binomial) at every usual n.
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}, default "auto"
+        Exact (binomial) at every usual n. Importance sampling and saddlepoint are for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, where they are used.
     thresholds : sequence of float, default (0.05,)
@@ -113,7 +113,7 @@ def sign_test(
             "n_unchanged": moved.unchanged,
             "n_unknown": moved.unknown,
             "p_normal": normal_p(_z(moved), direction),
-            "smallest_p": found.smallest_p,
+            **found.details(),
         },
     )
 

@@ -66,8 +66,9 @@ def signed_rank(
         ``details["substitutes"]`` and in a note.
     level : float, default 0.95
         Least level of the two-sided interval.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}, default "auto"
         Exact by convolution at every usual n.
+        Importance sampling and saddlepoint are for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, where they are used.
     thresholds : sequence of float, default (0.05,)
@@ -286,7 +287,7 @@ def _details(
         "zeros": zeros,
         "rank_biserial": (core.t_plus - core.t_minus) / whole if whole else 0.0,
         "p_normal": normal_p(normal_z(core.t_plus, core.ranks), alternative),
-        "smallest_p": core.null.smallest_p,
+        **core.null.details(),
     }
     if spread is not None:
         details["substitutes"] = spread

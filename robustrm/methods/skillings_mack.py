@@ -34,8 +34,9 @@ def skillings_mack(
     table : OccasionTable
         Subjects with at least two occasions are used. Only the order of a subject's own
         values counts, so the scale plays no part.
-    null : {"auto", "exact", "monte carlo"}, default "auto"
+    null : {"auto", "exact", "monte carlo", "importance sampling"}, default "auto"
         Exact within the stated work budget, Monte Carlo beyond it.
+        Importance sampling is for far tails.
     draws : int or sequence of int, optional
         Monte Carlo draws, or their stages.
     thresholds : sequence of float, default (0.05,)
@@ -126,8 +127,16 @@ def skillings_mack(
 def problem(table: OccasionTable) -> AdditiveProblem:
     """Return the test on a table: each subject's scores permuted over the occasions it has."""
     used = _used(table)
+    return problem_with_gaps(used, block_scores(used.order_codes()))
+
+
+def problem_with_gaps(used: OccasionTable, scores: Floats) -> AdditiveProblem:
+    """Let scores (n, k), zero where missing, be permuted over each subject's own occasions.
+
+    The statistic is A' V⁻ A with V the covariance of the sums A over these permutations, whatever
+    the scores are.
+    """
     observed = ~used.missing
-    scores = block_scores(used.order_codes())
     form = quadratic(_root_of_inverse(conditional_covariance(scores, observed)))
     tables = permutation_tables(scores, observed=observed)
     # where every subject is tied throughout there is no covariance to divide by

@@ -129,6 +129,14 @@ def check_margin(margin: float | None, reason: str | None) -> None:
         )
 
 
+def check_answer(argument: str, answer: object) -> None:
+    """Refuse what is neither yes, no nor left open."""
+    if answer is not None and not isinstance(answer, bool):
+        raise ArgumentError(
+            f"`{argument}` must be true, false or left out (not known), got {answer!r}."
+        )
+
+
 def check_text(argument: str, text: object) -> None:
     """Refuse what is no text, or an empty one."""
     if text is not None and not (isinstance(text, str) and text.strip()):

@@ -31,6 +31,7 @@ from robustrm.methods.registry import ADJUSTMENTS
 from robustrm.plan.checking import (
     Family,
     Limit,
+    check_answer,
     check_created,
     check_digest,
     check_margin,
@@ -43,6 +44,7 @@ from robustrm.plan.checking import (
     checked_occasions,
     methods_for,
 )
+from robustrm.plan.grid import GridChoices, checked_grid
 from robustrm.results import Scale
 
 MarkerKind = Literal["concentration", "count", "score"]
@@ -58,6 +60,8 @@ COMPANIONS = (
     "conover",
 )
 """What stands beside the planned tests unless a plan says otherwise."""
+
+_GRID = GridChoices()
 
 _CHOICES: Mapping[str, tuple[str, ...]] = types.MappingProxyType(
     {
@@ -135,10 +139,18 @@ class Plan:
         In an exploratory study (a pilot) estimates come first and p values are labelled.
     design : {"single-arm", "randomised-order"}
         Decides the wording: a single-arm change gets no causal verb.
+    selected : bool or None
+        Whether people were selected on a high value of the marker, after which later values are
+        expected to lie lower without any change of the person; None leaves it open.
+    own_runs : bool or None
+        Whether each occasion was assayed in a run of its own, so that a difference between runs
+        enters every comparison; None leaves it open.
     stages : tuple of int
         Monte Carlo draws, raised stage by stage while a p value is not resolved.
     bootstrap_draws : int
         Bootstrap resamples.
+    grid : GridChoices, or a mapping of its keys
+        The specifications that the sensitivity analysis crosses with one another.
     seed : int or None
         Root of all random streams; None draws one and records it.
     created : str or None
@@ -188,8 +200,11 @@ class Plan:
     in_time: bool = True
     purpose: Literal["exploratory", "confirmatory"] = "exploratory"
     design: Literal["single-arm", "randomised-order"] = "single-arm"
+    selected: bool | None = None
+    own_runs: bool | None = None
     stages: tuple[int, ...] = STAGES
     bootstrap_draws: int = 9_999
+    grid: GridChoices = _GRID
     seed: int | None = None
     created: str | None = None
     data_digest: str | None = None
@@ -205,6 +220,8 @@ class Plan:
             raise ArgumentError(f"`sides` must be 1 or 2, got {self.sides!r}.")
         if not isinstance(self.in_time, bool):
             raise ArgumentError(f"`in_time` must be true or false, got {self.in_time!r}.")
+        for name in ("selected", "own_runs"):
+            check_answer(name, getattr(self, name))
         check_pair(self.pair, self.adjust, self.sides)
         check_choice("omnibus", self.omnibus, methods_for("omnibus"))
         check_level(self.level)
@@ -229,6 +246,7 @@ class Plan:
             "contrasts": checked_family(self.contrasts),
             "companions": checked_companions(self.companions),
             "stages": check_draws(tuple(self.stages), "stages"),
+            "grid": checked_grid(self.grid),
             "amendments": tuple(str(text) for text in self.amendments),
         }
         for name, value in settled.items():
@@ -332,7 +350,9 @@ def _is_limit(name: str, value: object) -> bool:
 
 
 def _listed(value: Any) -> Any:
-    """Return tuples as lists, as TOML and JSON have them."""
+    """Return tuples as lists and a grid as a table, as TOML and JSON have them."""
+    if isinstance(value, GridChoices):
+        return value.to_dict()
     return [_listed(item) for item in value] if isinstance(value, tuple) else value
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import BinaryIO
+from typing import Any, BinaryIO
 
 from robustrm._checks import check_names, did_you_mean
 from robustrm._format import counted, listing
@@ -15,6 +15,7 @@ from robustrm.ledger import LedgerLine
 from robustrm.reading import audit
 from robustrm.reading.files import load
 from robustrm.reading.layout import Framed, framed
+from robustrm.reading.plates import plates_of, tell
 from robustrm.reading.proposals import propose
 from robustrm.records import Declared, Findings, Written, arrange_written, sheets
 from robustrm.records.limits import Limit
@@ -42,6 +43,7 @@ def read_table(
     replicates: How | None = None,
     decimal: Mark | None = None,
     sheet: str | None = None,
+    plate: str | None = None,
 ) -> OccasionTable:
     r"""Read one marker of one study from a text table or a workbook.
 
@@ -77,6 +79,10 @@ def read_table(
         Decimal mark of numbers written as text. Only ``1,234`` and the like need it.
     sheet : str, optional
         Sheet of a workbook that has several.
+    plate : str, optional
+        Long layout: the column that says in which run or plate each value was assayed. Where
+        occasions share no plate a note says that plates and change cannot be told apart; it
+        does not stop the run.
 
     Returns
     -------
@@ -108,7 +114,7 @@ def read_table(
     >>> str(table.tokens[1, 1])
     'haemolysed'
     """
-    roles = _Roles.declared(subject, occasions, occasion, value, order)
+    roles = _Roles.declared(subject, occasions, occasion, value, order, plate)
     conditions = _conditions(where)
     declared = Declared(replicates, lower_limit, upper_limit, resolution, decimal)
     names = [*roles.columns, *conditions]
@@ -125,6 +131,7 @@ def read_table(
     found.notes += audit.private_notes(frame.sheet, roles.subject)
     unit = audit.settle_unit(frame, roles.value_columns, unit, found)
     written, labels = _written(frame, roles, found)
+    assayed = {} if plate is None else _plates(frame.sheet, plate, written, labels, found)
     arranged, mark = arrange_written(
         written, found, occasions=labels, declared=declared, source=grid.name
     )
@@ -137,6 +144,7 @@ def read_table(
             "layout": roles.layout,
             "decimal": mark,
             "n_rows": len(frame.sheet.rows),
+            **assayed,
         },
     )
     return replace(table, notes=(*table.notes, *audit.jumps(table)))
@@ -151,6 +159,7 @@ class _Roles:
     occasion: str | None
     value: str | None
     order: tuple[str, ...] | None
+    plate: str | None
 
     @classmethod
     def declared(
@@ -160,9 +169,16 @@ class _Roles:
         occasion: str | None,
         value: str | None,
         order: Sequence[str] | None,
+        plate: str | None,
     ) -> _Roles:
-        long = {"occasion": occasion, "value": value, "order": order}
+        long = {"occasion": occasion, "value": value, "order": order, "plate": plate}
         given = [f"`{name}`" for name, option in long.items() if option is not None]
+        if occasions is not None and given == ["`plate`"]:
+            raise ArgumentError(
+                f"`plate` is for one row a cell, got {plate!r} with `occasions`: in a wide file "
+                "one column cannot say where the values of several occasions were assayed. Write "
+                "the file long, or leave the option out."
+            )
         if occasions is not None and given:
             raise ArgumentError(
                 f"`occasions` is for one row a subject and {listing(given)} for one row a cell, "
@@ -174,6 +190,7 @@ class _Roles:
             occasion,
             value,
             None if order is None else check_names("order", order, least=2),
+            plate,
         )
 
     @property
@@ -192,6 +209,7 @@ class _Roles:
             *(("--occasions", name) for name in self.occasions or ()),
             ("--occasion", self.occasion),
             ("--value", self.value),
+            ("--plate", self.plate),
         ]
         return [(option, name) for option, name in named if name is not None]
 
@@ -254,6 +272,19 @@ def _chosen(sheet: Sheet, conditions: Mapping[str, str], found: Findings) -> She
         found.lines.append(LedgerLine("where", what))
         sheet = replace(sheet, rows=rows)
     return sheet
+
+
+def _plates(
+    sheet: Sheet,
+    column: str,
+    written: Sequence[Written],
+    labels: Sequence[str],
+    found: Findings,
+) -> dict[str, Any]:
+    """Say where the values were assayed, and return what the source keeps of it."""
+    plates = plates_of(sheet, column, written, labels)
+    tell(plates, found)
+    return {"plate": plates.to_dict()}
 
 
 def _written(

@@ -29,6 +29,14 @@ class TextTable:
     notes: tuple[Note, ...]
 
 
+def text_of(data: bytes, *, names: Sequence[str], source: str) -> tuple[str, str, int]:
+    """Return a text table whole: its text, its separator, and the lines to pass before it."""
+    text, _ = _decoded(data, source)
+    lines = text.splitlines()
+    start, delimiter = _stated(lines)
+    return text, delimiter or _delimiter(lines, names), start
+
+
 def rows_of(data: bytes, *, names: Sequence[str], source: str) -> TextTable:
     """Return the rows of a text table."""
     text, encoding = _decoded(data, source)

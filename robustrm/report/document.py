@@ -14,10 +14,11 @@ from collections.abc import Iterable, Sequence
 from dataclasses import asdict
 from typing import Any
 
-from robustrm.analysis import Analysis, Row
+from robustrm.analysis import Analysis, Row, apart, references
 from robustrm.ledger import Ledger, LedgerLine
 from robustrm.methods.summary import OccasionSummary
-from robustrm.results import TestResult, plain
+from robustrm.results import plain
+from robustrm.sensitivity_analysis import Sensitivity
 from robustrm.table import OccasionTable, natural_key
 
 SCHEMA = "robustrm.report"
@@ -28,22 +29,25 @@ Document = dict[str, Any]
 _ORDER_STATISTICS = {"smallest": 0.0, "q1": 0.25, "median": 0.5, "q3": 0.75, "largest": 1.0}
 
 
-def document(analysis: Analysis) -> Document:
+def document(analysis: Analysis, sensitivity: Sensitivity | None = None) -> Document:
     """Return everything that a report of `analysis` shows, JSON-safe and unrounded.
 
     Parameters
     ----------
     analysis : Analysis
         A finished analysis.
+    sensitivity : Sensitivity, optional
+        Whether its conclusion holds; the key ``sensitivity`` is None without it.
 
     Returns
     -------
     dict
         Keys ``schema``, ``schema_version``, ``study``, ``plan``, ``advice``, ``attainable``,
-        ``primary``, ``omnibus``, ``supplementary``, ``beside``, ``skipped``, ``effects``,
+        ``primary``, ``omnibus``, ``supplementary``, ``beside``, ``skipped``,
+        ``sensitivity``, ``effects``,
         ``summary``, ``cells``, ``inclusion``, ``ledger``, ``notes`` and ``record``.
     """
-    reference = _references(analysis)
+    reference = references(analysis.rows())
     result: Document = plain(
         {
             "schema": SCHEMA,
@@ -57,6 +61,7 @@ def document(analysis: Analysis) -> Document:
             "supplementary": [_row(row, reference) for row in analysis.supplementary],
             "beside": [_row(row, reference) for row in analysis.beside],
             "skipped": [asdict(skip) for skip in analysis.skips],
+            "sensitivity": None if sensitivity is None else sensitivity.to_dict(),
             "effects": [effect.to_dict() for effect in analysis.effects],
             "summary": [_summary(s, analysis.table) for s in analysis.summary],
             "cells": _cells(analysis.table),
@@ -113,30 +118,12 @@ def _head(row: Row) -> dict[str, Any]:
     }
 
 
-def _row(row: Row, reference: dict[str, TestResult]) -> dict[str, Any]:
+def _row(row: Row, reference: dict[str, Row]) -> dict[str, Any]:
     return {
         **_head(row),
-        "apart": _apart(row.result, reference.get(row.label, row.result)),
+        "apart": apart(row.result, reference.get(row.label, row).result),
         "result": row.result.to_dict(),
     }
-
-
-def _references(analysis: Analysis) -> dict[str, TestResult]:
-    """Return, for each thing compared, the planned result that others stand beside."""
-    result: dict[str, TestResult] = {}
-    for row in analysis.rows():
-        result.setdefault(row.label, row.result)
-    return result
-
-
-def _apart(result: TestResult, reference: TestResult) -> list[str]:
-    """Say in what a result differs from the planned one, so that it is not read as its equal."""
-    differs = {
-        "n": result.subjects != reference.subjects or result.n_subjects != reference.n_subjects,
-        "scale": result.scale != reference.scale,
-        "estimand": result.estimand != reference.estimand,
-    }
-    return [name for name, different in differs.items() if different]
 
 
 # ── the data and who is in what ───────────────────────────────────────────────────────────

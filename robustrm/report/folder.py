@@ -19,19 +19,22 @@ from robustrm._checks import check_choice
 from robustrm._format import Style, listing
 from robustrm.analysis import Analysis, Progress
 from robustrm.errors import ArgumentError, RobustrmError
-from robustrm.figures import Picture, pictures
+from robustrm.figures import Picture, pictures, sensitivity_pictures
 from robustrm.report.document import SCHEMA, Document, document
 from robustrm.report.html import Drawing, page
 from robustrm.report.json_text import json_text
 from robustrm.report.methods_text import methods_text
 from robustrm.report.tables import csv_tables
+from robustrm.sensitivity_analysis import Sensitivity
 
 _FILES = frozenset({"report.html", "results.json", "methods.txt", "plan.toml"})
 _FOLDERS = frozenset({"tables", "figures"})
 # what earlier reports put into these folders; anything else is somebody's own
 _WRITTEN = re.compile(
-    r"(summary|comparisons|beside|effects|inclusion|ledger|cells)\.csv"
-    r"|(trajectories|comparisons|null-distribution|change-\d+|methods-\d+)\.(svg|png)"
+    r"(summary|comparisons|beside|effects|inclusion|ledger|cells"
+    r"|specifications|left-out|limits|missing|tipping|margins)\.csv"
+    r"|(trajectories|comparisons|null-distribution|specifications|missing-map"
+    r"|(change|methods|without-one)-\d+)\.(svg|png)"
 )
 
 
@@ -40,6 +43,7 @@ def write_report(
     folder: str | Path,
     *,
     style: Style = "medical",
+    sensitivity: Sensitivity | None = None,
     progress: Progress | None = None,
 ) -> Path:
     """Write the report of an analysis into a folder.
@@ -53,6 +57,8 @@ def write_report(
         an earlier report is replaced.
     style : {"medical", "apa"}, default "medical"
         How p values are written in the page and the paragraphs.
+    sensitivity : Sensitivity, optional
+        Whether the conclusion holds: a section of the report, with its tables and figures.
     progress : callable, optional
         Called with (done, total) after each part.
 
@@ -78,7 +84,7 @@ def write_report(
     try:
         _check_target(target)
         with _draft_of(target) as draft:
-            _write_parts(analysis, draft, style, progress)
+            _write_parts(analysis, sensitivity, draft, style, progress)
     except OSError as error:
         raise RobustrmError(
             f"The report cannot be written to {str(folder)!r}: {error.strerror or error}. "
@@ -168,9 +174,17 @@ def _put(draft: Path, target: Path) -> None:
 # ── the files ─────────────────────────────────────────────────────────────────────────────
 
 
-def _write_parts(analysis: Analysis, draft: Path, style: Style, progress: Progress | None) -> None:
-    held = document(analysis)
+def _write_parts(
+    analysis: Analysis,
+    sensitivity: Sensitivity | None,
+    draft: Path,
+    style: Style,
+    progress: Progress | None,
+) -> None:
+    held = document(analysis, sensitivity)
     drawn = pictures(analysis)
+    if sensitivity is not None:
+        drawn += sensitivity_pictures(sensitivity)
     parts: list[Callable[[], None]] = [
         lambda: _write(draft / "results.json", json_text(held)),
         lambda: _write(draft / "plan.toml", analysis.plan.to_toml()),

@@ -9,15 +9,18 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from robustrm._format import Style, listing
+from robustrm._format import Style, listing, restyled
 from robustrm.report import sentences, sheets
 from robustrm.report.document import Document
 from robustrm.report.effects_sheet import effects_sheet
 from robustrm.report.methods_text import methods_paragraph
 from robustrm.report.plan_text import origin
 from robustrm.report.results_text import results_paragraph
+from robustrm.report.sensitivity_sheets import sensitivity_sheets
+from robustrm.sensitivity_analysis import PARTS, TITLES
 
 ANSWER = "comparisons"  # the figure that stands beside the answer
+SENSITIVITY = ("specifications", "without-one-", "missing-map")  # of the sensitivity section
 METHODS = "methods-"  # how the names of those begin that stand beside the parametric results
 
 
@@ -78,8 +81,15 @@ def page(document: Document, drawings: Sequence[Drawing] = (), style: Style = "m
         sheet=_set(document, style),
         record=record_lines(document["record"]),
         answer_drawings=[d for d in drawings if d.name == ANSWER],
+        sensitivity=_sensitivity(document, style),
+        screen=_screen(document, style),
+        sensitivity_drawings=[d for d in drawings if d.name.startswith(SENSITIVITY)],
         methods_drawings=[d for d in drawings if d.name.startswith(METHODS)],
-        drawings=[d for d in drawings if d.name != ANSWER and not d.name.startswith(METHODS)],
+        drawings=[
+            d
+            for d in drawings
+            if d.name != ANSWER and not d.name.startswith((METHODS, *SENSITIVITY))
+        ],
     )
 
 
@@ -128,6 +138,35 @@ def _set(document: Document, style: Style) -> dict[str, sheets.Sheet]:
         "sets": sets,
         "ledger": sheets.ledger_sheet(document),
     }
+
+
+def _screen(document: Document, style: Style) -> sheets.Sheet | None:
+    """Return the table that says in one screen what holds; None without a sensitivity analysis."""
+    if document["sensitivity"] is None:
+        return None
+    return sensitivity_sheets(document, style)["overview"]
+
+
+def _sensitivity(document: Document, style: Style) -> list[dict[str, Any]]:
+    """Return the parts of the sensitivity section: title, sentences, notes and table."""
+    if document["sensitivity"] is None:
+        return []
+    tables = sensitivity_sheets(document, style)
+    own = {"leave_one_out": "left_out", "missing": "gaps", "questions": "margins"}
+    found = []
+    for name in PARTS:
+        held = document["sensitivity"][name]
+        sheet = tables.get(own.get(name, ""))
+        found.append(
+            {
+                "name": name.replace("_", "-"),
+                "title": TITLES[name],
+                "sentences": [restyled(text, style) for text in held["sentences"]],
+                "notes": [sentences.note_text(note, style) for note in held["notes"]],
+                "sheet": sheet if sheet is not None and sheet.lines else None,
+            }
+        )
+    return found
 
 
 def record_lines(record: Mapping[str, Any], prefix: str = "") -> list[tuple[str, str]]:

@@ -16,6 +16,7 @@ from robustrm._format import (
     percent,
     restyled,
 )
+from robustrm.methods.registry import in_sentence
 from robustrm.methods.registry import method as registered
 from robustrm.report.document import Document
 from robustrm.report.results_text import results_paragraph
@@ -26,7 +27,6 @@ from robustrm.report.sentences import (
     ZEROS,
     adjustment,
     all_rows,
-    in_sentence,
     is_exploratory,
     marker,
     planned_rows,

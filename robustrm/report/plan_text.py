@@ -7,9 +7,10 @@ from typing import Any
 
 from robustrm._format import declared, level_text, listing, number, percent
 from robustrm.methods.adjusting import TITLES
+from robustrm.methods.registry import in_sentence
 from robustrm.methods.registry import method as registered
 from robustrm.plan import Plan
-from robustrm.report.sentences import FAMILIES, SUBSTITUTES, ZEROS, in_sentence
+from robustrm.report.sentences import FAMILIES, SUBSTITUTES, ZEROS
 
 _MISSING = {
     "available": "Each comparison uses all subjects who have both of its occasions; tests over all "
@@ -53,6 +54,8 @@ def statement(plan: Plan) -> str:
         ("Missing visits", f"{_MISSING[plan.missing]} No value is filled in."),
         ("Outliers", "No value is removed as an outlier."),
         ("Relevant change", _margin(plan)),
+        ("Sensitivity", _sensitivity(plan)),
+        ("Open to bias", _asked(plan)),
         ("Random draws", _draws(plan)),
         ("This plan", " ".join([order_of_writing(found), *_amended(found)])),
     ]
@@ -170,6 +173,26 @@ def _margin(plan: Plan) -> str:
     if plan.used_scale == "log":
         within = f"A ratio between 1/{margin} and {margin}"
     return f"{within} counts as no relevant change ({plan.margin_reason})."
+
+
+def _sensitivity(plan: Plan) -> str:
+    grid = plan.grid
+    tests = listing([in_sentence(registered(name).title) for name in grid.test], 20)
+    return (
+        "Whether the conclusion holds is asked under other assumptions: beside the parametric "
+        "results, without each person in turn, over what values beyond a limit may have been, and "
+        "under other handling of missed visits. Specifications are declared over scale "
+        f"({listing(grid.scale)}) and test ({tests}); they have one joint P value by a permutation "
+        "test, and none of them replaces the primary analysis."
+    )
+
+
+def _asked(plan: Plan) -> str:
+    answers = {None: "not stated", True: "yes", False: "no"}
+    return (
+        f"People were selected on a high value of the marker: {answers[plan.selected]}. Each "
+        f"occasion is assayed in a run of its own: {answers[plan.own_runs]}."
+    )
 
 
 def _draws(plan: Plan) -> str:

@@ -19,13 +19,13 @@ from robustrm._format import (
     span,
     statistic_phrase,
 )
+from robustrm.methods.registry import in_sentence
 from robustrm.report.document import Document
 from robustrm.report.sentences import (
     NULLS,
     Result,
     adjustment,
     completeness,
-    in_sentence,
     is_exploratory,
     marker,
     moves,

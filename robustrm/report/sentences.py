@@ -12,6 +12,7 @@ from typing import Any
 
 from robustrm._format import Style, counted, listing, p_cell, restyled
 from robustrm.methods.adjusting import TITLES
+from robustrm.methods.registry import in_sentence
 from robustrm.report.document import Document
 
 Result = Mapping[str, Any]
@@ -72,25 +73,6 @@ class Remark:
 
     rows: str
     text: str
-
-
-_PEOPLE = (
-    "Winsorized",
-    "Friedman",
-    "Wilcoxon",
-    "Quade",
-    "Page",
-    "Skillings-Mack",
-    "Hotelling",
-    "Yuen",
-    "Nemenyi",
-    "Conover",
-)
-
-
-def in_sentence(title: str) -> str:
-    """Return the name of a method inside a sentence: names of people keep their capital."""
-    return title if title.startswith(_PEOPLE) else f"{title[:1].lower()}{title[1:]}"
 
 
 def is_exploratory(document: Document) -> bool:

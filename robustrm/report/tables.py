@@ -34,7 +34,8 @@ def csv_tables(document: Document) -> dict[str, str]:
     -------
     dict of str
         ``summary``, ``comparisons``, ``beside``, ``effects``, ``inclusion``, ``ledger`` and
-        ``cells``.
+        ``cells``; of a sensitivity analysis ``specifications``, ``left-out``, ``limits``,
+        ``missing``, ``tipping`` and ``margins``.
     """
     primary = document["primary"]["comparisons"]
     overall = [document["omnibus"]] if document["omnibus"] else []
@@ -47,6 +48,20 @@ def csv_tables(document: Document) -> dict[str, str]:
         "inclusion": _csv(_inclusions(document), ("analysis", "subject", "included", "reason")),
         "ledger": _csv(document["ledger"]["lines"], _LEDGER),
         "cells": _csv(document["cells"]),
+        **_sensitivity_tables(document["sensitivity"]),
+    }
+
+
+def _sensitivity_tables(held: Mapping[str, Any] | None) -> dict[str, str]:
+    if held is None:
+        return {}
+    return {
+        "specifications": _csv(held["grid"]["frame"]),
+        "left-out": _csv(held["leave_one_out"]["frame"]),
+        "limits": _csv(held["limits"]["frame"]),
+        "missing": _csv(held["missing"]["frame"]),
+        "tipping": _csv(held["missing"]["tipping"]),
+        "margins": _csv(held["questions"]["margins"]),
     }
 
 
@@ -119,6 +134,15 @@ def _csv(rows: Iterable[Mapping[str, Any]], columns: Sequence[str] | None = None
     writer = csv.writer(sheet, lineterminator="\n")
     writer.writerow(names)
     writer.writerows([_cell(row[name]) for name in names] for row in kept)
+    return sheet.getvalue()
+
+
+def csv_text(rows: Iterable[Mapping[str, Any]], columns: Sequence[str]) -> str:
+    """Return rows as CSV text, headings made harmless too: they may hold labels of the user."""
+    sheet = io.StringIO()
+    writer = csv.writer(sheet, lineterminator="\n")
+    writer.writerow([_cell(name) for name in columns])
+    writer.writerows([_cell(row[name]) for name in columns] for row in rows)
     return sheet.getvalue()
 
 

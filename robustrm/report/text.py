@@ -39,7 +39,7 @@ def text(document: Document, style: Style = "medical") -> str:
         With a newline at its end. Control characters in labels are replaced: a label cannot
         move the cursor or break a table.
     """
-    safe = _printable(document)
+    safe = printable(document)
     parts = [
         _paragraph(safe["attainable"]["sentence"]),
         _opening(safe),
@@ -131,10 +131,10 @@ def _paragraph(line: str) -> str:
     return textwrap.fill(line, COLUMNS)
 
 
-def _printable(value: Any) -> Any:
+def printable(value: Any) -> Any:
     """Return the document with every control and formatting character replaced."""
     if isinstance(value, str):
         return "".join("�" if unicodedata.category(c) in ("Cc", "Cf") else c for c in value)
     if isinstance(value, dict):
-        return {key: _printable(item) for key, item in value.items()}
-    return [_printable(item) for item in value] if isinstance(value, list) else value
+        return {key: printable(item) for key, item in value.items()}
+    return [printable(item) for item in value] if isinstance(value, list) else value

@@ -8,11 +8,12 @@ import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
 
-from robustrm.trials import grid
+from robustrm.trials import grid, joint
 from robustrm.trials.coverage import coverage_table
 from robustrm.trials.coverage_page import write_coverage
 from robustrm.trials.evidence import write_evidence
 from robustrm.trials.grid_page import write_record
+from robustrm.trials.joint_page import write_joint
 from robustrm.trials.level import Run, level_tables
 from robustrm.trials.location import location_table
 from robustrm.trials.location_page import write_location
@@ -26,13 +27,13 @@ def main(arguments: Sequence[str] | None = None) -> None:
     for name, about in _ABOUT.items():
         command = commands.add_parser(name, help=about)
         command.add_argument("--datasets", type=int, default=2000, help="data sets a cell")
-        draws = grid.DRAWS if name == "advice" else DRAWS
+        draws = {"advice": grid.DRAWS, "grid": joint.DRAWS}.get(name, DRAWS)
         command.add_argument(
             "--draws", type=int, default=draws, help="rearrangements or resamples of a data set"
         )
         command.add_argument("--seed", type=int, default=1, help="root of all streams")
         command.add_argument(
-            "--out", type=Path, required=True, help=f"folder of {name}.csv and .md"
+            "--out", type=Path, required=True, help="folder of the .csv and the .md"
         )
         if name == "advice":
             command.add_argument("--record", type=Path, help="folder of record.csv, if another")
@@ -42,6 +43,8 @@ def main(arguments: Sequence[str] | None = None) -> None:
         write_evidence(level_tables(run, progress=_telling("cells")), chosen.out)
     elif chosen.command == "location":
         write_location(location_table(run, progress=_telling("data sets")), chosen.out)
+    elif chosen.command == "grid":
+        write_joint(joint.joint_table(run, progress=_telling("tables")), chosen.out)
     elif chosen.command == "advice":
         _make_record(run, chosen.out, chosen.record or chosen.out)
     else:
@@ -64,6 +67,7 @@ _ABOUT = {
     "advice": "level, power and regret of the advised test, beside what else is done",
     "level": "level and familywise error of the tests",
     "location": "level of the overall tests under equal trimmed means and unequal spread",
+    "grid": "level of the joint test of a specification grid",
     "coverage": "coverage and width of every kind of interval",
 }
 

@@ -13,7 +13,15 @@ quadratic or a linear form of their sum. The rooms, in the order the data pass t
     results        Tail and Law, what comes out
     problem        tables and form together, with what is derived from both
     work           what an exact answer would cost, and which way is cheapest
+    far_tails      the way to a tail that Monte Carlo cannot reach, by one of the next three
+    corner         exact, the few arrangements at the end of the support
+    importance     draws from tilted tables, weighed: interval and effective sample size
+    saddlepoint    linear forms: an approximation without draws, many at once
+    tilting        exponential tilts of tables and their cumulants, for these two
+    orbit_means    the density of a tilted draw, whichever way its occasions are relabelled
     engine         the front door: tail, law, draws, smallest_tail
+    shared         the same random rearrangements for many tests of one data set
+    joint          one permutation test of many statistics together
 
 Apart from these, with the same tables, draws and results, stands the one statistic that is neither
 form::

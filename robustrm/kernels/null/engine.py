@@ -9,7 +9,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
-from robustrm.kernels.null import monte_carlo, sorted_halves, two_halves
+from robustrm.kernels.null import far_tails, importance, monte_carlo, sorted_halves, two_halves
 from robustrm.kernels.null.forms import Form, Linear, Quadratic
 from robustrm.kernels.null.problem import Problem
 from robustrm.kernels.null.results import How, Law, Share, Tail, make_law
@@ -21,6 +21,7 @@ STAGES = (9_999, 99_999, 999_999)
 # Pairs of half sums looked at in search of the largest attainable statistic.
 MOST_PAIRS = 2**30
 
+Choice = Literal["auto", "exact", "monte carlo", "importance sampling", "saddlepoint"]
 Seed = int | np.random.SeedSequence | np.random.BitGenerator | np.random.Generator | None
 
 
@@ -29,10 +30,10 @@ def tail(
     observed: npt.ArrayLike,
     form: Form,
     *,
-    null: Literal["auto", "exact", "monte carlo"] = "auto",
+    null: Choice = "auto",
     budget: float = BUDGET,
     draws: int | None = None,
-    stages: Sequence[int] = STAGES,
+    stages: Sequence[int] | None = None,
     thresholds: Sequence[float] = (0.05,),
     rng: Seed = None,
     block: int | None = None,
@@ -48,19 +49,22 @@ def tail(
         Sum of the observed score vectors.
     form : Quadratic or Linear
         See `forms`; a quadratic form counts large values, a linear one the tail it names.
-    null : {"auto", "exact", "monte carlo"}
+    null : {"auto", "exact", "monte carlo", "importance sampling", "saddlepoint"}
         "auto" is exact within the budget, else Monte Carlo. "exact" beyond the budget answers NaN
-        and computes nothing: ask `plan_work` first, whose sentence says why.
+        and computes nothing: ask `plan_work` first, whose sentence says why. The last two are for
+        far tails, see `far_tails`; where few arrangements are in the tail they count them, and
+        the answer is exact. A saddlepoint of a quadratic form is NaN.
     budget : float, default 2e9
         Operations an exact answer may take (about 10 ns each).
     draws : int, optional
-        Exactly so many Monte Carlo draws; the default follows `stages`.
+        Exactly so many draws; the default follows `stages`.
     stages, thresholds : sequence
-        Go on to the next stage while the 99.9% interval of p contains a threshold.
+        Go on to the next stage while the 99.9% interval of p contains a threshold. The default
+        stages are 9,999, 99,999 and 999,999; 20,000 and 200,000 for importance sampling.
     rng : int, SeedSequence, BitGenerator, Generator or None
         See `numpy.random.default_rng`.
     block : int, optional
-        Monte Carlo draws held at once; changes no result.
+        Draws held at once; changes no result.
     progress : callable, optional
         Called with (draws done, draws of this stage).
 
@@ -85,9 +89,23 @@ def tail(
     0.05267
     """
     problem = Problem(tuple(tables), form)
-    value = float(form.values(np.atleast_1d(np.asarray(observed, np.float64)), exact=problem.exact))
+    total = np.atleast_1d(np.asarray(observed, np.float64))
+    value = float(form.values(total, exact=problem.exact))
     if not (problem.is_finite and math.isfinite(value)):
         return _no_answer(problem, "monte carlo")
+    if null == "saddlepoint":
+        return far_tails.approximated(problem, value)
+    if null == "importance sampling":
+        return far_tails.sampled(
+            problem,
+            total,
+            value,
+            stages=_stages(draws, stages, importance.STAGES),
+            thresholds=thresholds,
+            rng=np.random.default_rng(rng),
+            block=block,
+            progress=progress,
+        )
     if null != "monte carlo":
         cost = cheapest(problem, budget)
         if cost.affordable:
@@ -97,12 +115,19 @@ def tail(
     return _drawn_tail(
         problem,
         value,
-        stages=stages if draws is None else (draws,),
+        stages=_stages(draws, stages, STAGES),
         thresholds=thresholds,
         rng=np.random.default_rng(rng),
         block=block,
         progress=progress,
     )
+
+
+def _stages(draws: int | None, stages: Sequence[int] | None, usual: Sequence[int]) -> Sequence[int]:
+    """Numbers of draws: exactly `draws`, else the stages given, else the usual ones."""
+    if draws is not None:
+        return (draws,)
+    return usual if stages is None else stages
 
 
 def law(tables: Sequence[Table], form: Form, *, budget: float = BUDGET) -> Law | None:

@@ -12,8 +12,17 @@ import numpy as np
 from robustrm.kernels.null.tables import Array
 
 How = Literal[
-    "sorted sums", "two halves", "convolution", "sorted halves", "every pair", "monte carlo"
+    "sorted sums",
+    "two halves",
+    "convolution",
+    "sorted halves",
+    "every pair",
+    "corner",
+    "monte carlo",
+    "importance sampling",
+    "saddlepoint",
 ]
+Null = Literal["exact", "monte carlo", "importance sampling", "saddlepoint"]
 
 
 @dataclass(frozen=True)
@@ -24,27 +33,31 @@ class Tail:
     ----------
     p_value : float
         NaN if a score is not finite, or if an exact answer was demanded beyond the budget.
-    null : {"exact", "monte carlo"}
+    null : {"exact", "monte carlo", "importance sampling", "saddlepoint"}
     how : str
         Way of counting: "sorted sums", "two halves", "convolution", "sorted halves", "every pair"
-        (of half sums, see `studentized`), "monte carlo".
+        (of half sums, see `studentized`), "corner" (the few arrangements of a far tail); or the
+        name of the null where nothing is counted.
     arrangements : int
         Product over the subjects of their arrangements, nothing fixed and nothing merged.
     log_p : float
         Natural logarithm of p, right where `p_value` has reached the smallest positive float64.
     p_interval : tuple of float or None
-        99% Clopper-Pearson interval of a Monte Carlo p.
+        99% interval: Clopper-Pearson of a Monte Carlo p, normal on log p of importance sampling.
     draws : int or None
-        Monte Carlo draws.
+        Monte Carlo draws, or those of importance sampling.
+    effective_sample_size : float or None
+        Importance sampling: so many equally weighted draws in the tail would say as much.
     """
 
     p_value: float
-    null: Literal["exact", "monte carlo"]
+    null: Null
     how: How
     arrangements: int
     log_p: float
     p_interval: tuple[float, float] | None = None
     draws: int | None = None
+    effective_sample_size: float | None = None
 
 
 @dataclass(frozen=True)
