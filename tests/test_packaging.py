@@ -25,7 +25,11 @@ TOP_LEVEL = {
     "docs",
 }
 # Names under which a library is imported, where they differ from the one it is installed by.
-IMPORT_NAMES = {"scikit-posthocs": "scikit_posthocs", "tomli-w": "tomli_w"}
+IMPORT_NAMES = {
+    "dask": "distributed",  # dask[distributed] brings it
+    "scikit-posthocs": "scikit_posthocs",
+    "tomli-w": "tomli_w",
+}
 
 
 def repository_files() -> list[Path]:
