@@ -55,6 +55,14 @@ class Recorded(click.Command):
         return super().parse_args(ctx, args)
 
 
+style_option = click.option(
+    "--style",
+    type=click.Choice(typing.get_args(Style)),
+    default="medical",
+    help="How p values are printed: P = 0.013 (medical) or p = .013 (apa).",
+)
+
+
 @click.group(
     cls=Group,
     context_settings={"help_option_names": ["-h", "--help"]},
@@ -147,12 +155,7 @@ def check(
     metavar="FOLDER",
     help="Write the report here: HTML, JSON, tables, figures, methods text and plan.",
 )
-@click.option(
-    "--style",
-    type=click.Choice(typing.get_args(Style)),
-    default="medical",
-    help="How p values are printed: P = 0.013 (medical) or p = .013 (apa).",
-)
+@style_option
 @json_option
 @click.option("--quiet", is_flag=True, help="No progress and no notes on stderr.")
 @debug_option
@@ -215,12 +218,7 @@ def _result_text(analysis: Analysis, style: Style, *, as_json: bool) -> str:
     metavar="FOLDER",
     help="Write the whole report here, this section included.",
 )
-@click.option(
-    "--style",
-    type=click.Choice(typing.get_args(Style)),
-    default="medical",
-    help="How p values are printed: P = 0.013 (medical) or p = .013 (apa).",
-)
+@style_option
 @json_option
 @click.option("--quiet", is_flag=True, help="No progress and no notes on stderr.")
 @debug_option

@@ -362,7 +362,7 @@ def far_tail_notes(found: Tail, thresholds: Sequence[float]) -> tuple[Note, ...]
 _SADDLEPOINT = Note(
     "saddlepoint",
     "P is a saddlepoint approximation.",
-    "Against exact laws of 20 to 60 subjects its error was at most 4% of P for signed ranks and "
-    "about 10% for sign flips, more when one difference outweighs the others.",
+    "Against exact laws its error was at most 4% of P for signed ranks of 20 to 60 subjects and "
+    "about 10% for sign flips of 20 to 40, more when one difference outweighs the others.",
     "Compare with null='exact' or 'importance sampling' where it matters.",
 )
